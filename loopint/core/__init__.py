@@ -1,0 +1,1 @@
+"""Exact numbers, balls, Laurent series, kinematics and conventions: the ground floor."""

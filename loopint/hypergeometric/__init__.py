@@ -1,0 +1,1 @@
+"""Epsilon-expansions of Gauss functions as kinematics-independent tables of proven accuracy."""

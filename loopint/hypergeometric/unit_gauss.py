@@ -1,0 +1,336 @@
+"""Epsilon-coefficients of F(w) = 2F1(1, b; c; w) for b = b0 + b1 eps, c = c0 + c1 eps.
+
+Algorithm
+---------
+F satisfies the first-order equation (from the ratio of neighbouring Taylor terms)
+
+    w (1-w) F' = (b w - (c-1)) F + (c-1),
+
+which in u = -log(1-w), where d/du = (1-w) d/dw, w = 1 - exp(-u), becomes
+
+    w dF/du + (c-1 - b w) F = c-1.
+
+At order eps^k, with F = sum_k F_k eps^k and r_k the terms of lower order,
+
+    w F_k' + (c0-1 - b0 w) F_k = r_k,
+    r_k = (b1 w - c1) F_(k-1) + (c0-1) [k=0] + c1 [k=1],
+
+and the integrating factor u^(c0-1) E^(c0-1) exp(-b0 u), E = (exp(u)-1)/u, gives for c0 > 1
+
+    F_k = E^(1-c0) exp(b0 u) sum_n s_n u^n / (n + c0 - 1),
+    s = E^(c0-2) exp((1-b0) u) r_k.                                               (*)
+
+So every F_k is a power series in u with the radius 2 pi of E, computed once; a point costs the
+evaluation of polynomials.  In the part of the unit disc with Re w <= 1/2, |u| <= pi/3 (maximum
+principle; the maximum of |log(1-w)| over the boundary is at w = exp(+-i pi/3)), hence each term
+gains a factor 6.  For c0 <= 1 the contiguous relation F(b, c) = 1 + (b/c) w F(b+1, c+1) is used
+first.
+
+Bound
+-----
+On |u| <= R < 2 pi, from E = exp(u/2) sinh(u/2)/(u/2) and the product for sinh (DLMF 4.36.1),
+
+    exp(-R/2) sin(R/2)/(R/2) <= |E| <= (exp(R)-1)/R,     |w| <= exp(R) - 1,
+
+and (*) turns a bound M_(k-1) on |F_(k-1)| into M_k, the integral over the ray from 0 to u being at
+most max|s| / (c0-1).  Cauchy's estimate bounds the n-th coefficient by M_k R^-n.  That bound is
+far from sharp, so the table is computed to a length at which it is negligible, and shorter
+polynomials are cut from it whose tails are bounded by the computed coefficients themselves plus
+that remainder.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import lru_cache
+
+import flint
+from flint import acb, arb, arb_poly, arb_series, fmpq
+
+from loopint.core.errors import MorePrecisionNeeded
+from loopint.core.gamma_factors import EpsilonFactor
+from loopint.core.laurent import BallSeries
+from loopint.core.numbers import Ball, real_part
+from loopint.core.precision import series_length, working_precision
+
+LARGEST_RADIUS = 17 / 16  # just above pi/3
+SHORTEST_RADIUS_EXPONENT = 40  # below 2^-40 of it the polynomials no longer get shorter by much
+CAUCHY_RADII = (2.0, 3.0, 4.0, 5.0, 5.5, 6.0)
+
+
+@dataclass(frozen=True, slots=True)
+class GaussParameters:
+    """b = b0 + b1 eps and c = c0 + c1 eps of 2F1(1, b; c; w)."""
+
+    b0: fmpq
+    b1: fmpq
+    c0: fmpq
+    c1: fmpq
+
+    def raised(self) -> GaussParameters:
+        """Return the parameters (b + 1, c + 1)."""
+        return GaussParameters(self.b0 + 1, self.b1, self.c0 + 1, self.c1)
+
+    def ratio(self) -> EpsilonFactor:
+        """Return b/c exactly."""
+        return EpsilonFactor.linear_factor(self.b0, self.b1) / EpsilonFactor.linear_factor(
+            self.c0, self.c1
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class _Expansion:
+    """Power series in u of each epsilon order, and bounds on |u| <= R for each radius R."""
+
+    orders: list[arb_series]
+    bounds: list[list[arb]]  # bounds[i][k] for CAUCHY_RADII[i]
+
+
+class GaussTable:
+    """The product of an exact prefactor and 2F1(1, b; c; w), expanded in epsilon.
+
+    Evaluation is a set of polynomials in u = -log(1-w), truncated according to |u|.  Obtain
+    tables from `gauss_table`, which shares them between points.
+    """
+
+    def __init__(
+        self, lowest: int, orders: list[list[arb]], remainders: list[list[arb]], bits: int
+    ) -> None:
+        self.lowest = lowest
+        self._orders = orders
+        self._remainders = remainders
+        self._bits = bits
+        self._cut: dict[int, list[tuple[arb_poly, arb]]] = {}
+
+    def evaluate(self, u: Ball) -> BallSeries:
+        """Enclose every epsilon coefficient at u = -log(1-w), |u| <= 17/16.
+
+        Raises
+        ------
+        MorePrecisionNeeded
+            If the ball u is not known to lie in |u| <= 17/16.
+        """
+        size = float(abs(u).upper()) if isinstance(u, arb) else float(u.abs_upper())
+        if not size <= LARGEST_RADIUS:
+            raise MorePrecisionNeeded
+        exponent = 0
+        if size < LARGEST_RADIUS / 2:
+            exponent = SHORTEST_RADIUS_EXPONENT
+            if size > 0:
+                exponent = min(exponent, -math.frexp(size / LARGEST_RADIUS)[1])
+        pieces = self._cut.get(exponent)
+        if pieces is None:
+            pieces = self._cut[exponent] = self._truncate(exponent)
+        real = isinstance(u, arb)
+        return BallSeries(
+            self.lowest,
+            [polynomial(u) + (tail if real else acb(tail, tail)) for polynomial, tail in pieces],
+        )
+
+    def _truncate(self, exponent: int) -> list[tuple[arb_poly, arb]]:
+        """Cut polynomials for |u| <= (17/16) 2^-exponent with tails below 2^-bits."""
+        with working_precision(64):
+            radius = arb(LARGEST_RADIUS) * arb(2) ** -exponent
+            goal = arb(2) ** -self._bits
+            terms = max(self._terms_needed(k, radius, goal) for k in range(len(self._orders)))
+            tails = [self._tail(k, radius, terms) for k in range(len(self._orders))]
+        with working_precision(self._bits + 32):
+            return [
+                (arb_poly(coefficients[:terms]), arb(0, tail) if tail != 0 else arb(0))
+                for coefficients, tail in zip(self._orders, tails, strict=True)
+            ]
+
+    def _tail(self, k: int, radius: arb, terms: int) -> arb:
+        """Bound sum_{n >= terms} |a_n| radius^n."""
+        coefficients = self._orders[k]
+        length = len(coefficients)
+        total = arb(0)
+        for n in range(length - 1, terms - 1, -1):
+            total = total * radius + coefficients[n].abs_upper()
+        total = total * radius**terms
+        if all(bound == 0 for bound in self._remainders[k]):
+            return total.upper()
+        beyond = [
+            bound * (radius / cauchy) ** length / (1 - radius / cauchy)
+            for cauchy, bound in zip(CAUCHY_RADII, self._remainders[k], strict=True)
+        ]
+        return (total + min(beyond, key=lambda b: float(b.log().mid()))).upper()
+
+    def _terms_needed(self, k: int, radius: arb, goal: arb) -> int:
+        """Return the smallest number of terms whose tail bound is below the goal."""
+        low, high = 1, len(self._orders[k])
+        while low < high:
+            middle = (low + high) // 2
+            if self._tail(k, radius, middle) <= goal:
+                high = middle
+            else:
+                low = middle + 1
+        return low
+
+
+@lru_cache(maxsize=256)
+def gauss_table(
+    parameters: GaussParameters, prefactor: EpsilonFactor, highest: int, bits: int
+) -> GaussTable:
+    """Return the table of prefactor * 2F1(1, b; c; w) through order eps^highest.
+
+    The truncation error of every coefficient is below 2^-bits at any |u| <= 17/16, and is included
+    in the balls returned.
+    """
+    terms = max(highest - prefactor.lowest_order + 1, 1)
+    guard = 40 + 8 * terms
+    with working_precision(bits + guard):
+        shape = _series_shape(parameters, terms)
+        length = _safe_length(shape, bits + 16)
+        with series_length(length), working_precision(bits + guard + length // 2):
+            expansion = _expand(parameters, terms)
+            factor = prefactor.series(terms)
+            orders = _times_factor(expansion.orders, factor.coefficients)
+            columns = [_coefficients(series, length) for series in orders]
+        weights = [abs(c) for c in factor.coefficients]
+        remainders = [
+            [
+                _upper(sum((weights[j] * bound[k - j] for j in range(k + 1)), start=arb(0)))
+                for bound in expansion.bounds
+            ]
+            for k in range(terms)
+        ]
+    return GaussTable(prefactor.lowest_order, columns, remainders, bits)
+
+
+def _upper(x: arb) -> arb:
+    return arb(x.upper())
+
+
+def _coefficients(series: arb_series, length: int) -> list[arb]:
+    found = list(series.coeffs())
+    return found + [arb(0)] * (length - len(found))
+
+
+def _times_factor(orders: list[arb_series], factor: list[Ball]) -> list[arb_series]:
+    weights = [real_part(c) for c in factor]
+    result = []
+    for k in range(len(orders)):
+        total = orders[k] * weights[0]
+        for j in range(1, k + 1):
+            if weights[j] != 0:
+                total = total + orders[k - j] * weights[j]
+        result.append(total)
+    return result
+
+
+def _safe_length(bounds: list[list[arb]], bits: int) -> int:
+    """Return the smallest length at which Cauchy's estimate is below 2^-bits at |u| = 17/16."""
+    lengths = []
+    for radius, bound in zip(CAUCHY_RADII, bounds, strict=True):
+        worst = max(float((1 + b).log().upper()) for b in bound) / math.log(2)
+        lengths.append((bits + worst + 4) / math.log2(radius / LARGEST_RADIUS))
+    return math.ceil(min(lengths)) + 1
+
+
+def _series_shape(parameters: GaussParameters, terms: int) -> list[list[arb]]:
+    """Return the bounds M_k on |u| <= R for each Cauchy radius, without expanding."""
+    with series_length(2):
+        return _expand(parameters, terms).bounds
+
+
+def _expand(parameters: GaussParameters, terms: int) -> _Expansion:
+    if parameters.c0 > 1:
+        return _expand_direct(parameters, terms)
+    # F(b, c) = 1 + (b/c) w F(b+1, c+1)
+    raised = _expand(parameters.raised(), terms)
+    factor = parameters.ratio().series(terms)
+    if factor.lowest != 0:
+        raise ValueError(f"2F1(1, b; c; w) with {parameters} has no regular expansion")
+    w = _one_minus_exp_minus_u()
+    orders = [w * series for series in _times_factor(raised.orders, factor.coefficients)]
+    orders[0] = orders[0] + 1
+    bounds = []
+    for radius, bound in zip(CAUCHY_RADII, raised.bounds, strict=True):
+        size = arb(radius).exp() - 1
+        weights = [abs(c) for c in factor.coefficients]
+        new = [
+            size * sum((weights[j] * bound[k - j] for j in range(k + 1)), start=arb(0))
+            for k in range(terms)
+        ]
+        new[0] = new[0] + 1
+        bounds.append([_upper(b) for b in new])
+    return _Expansion(orders, bounds)
+
+
+def _expand_direct(p: GaussParameters, terms: int) -> _Expansion:
+    """Apply (*) of the module text; needs c0 > 1."""
+    base = _exp_minus_one_over_u()
+    w = _one_minus_exp_minus_u()
+    inner = _real_power(base, p.c0 - 2) * _exp_series(1 - p.b0)
+    outer = _real_power(base, 1 - p.c0) * _exp_series(p.b0)
+    b1, c1, start = arb(p.b1), arb(p.c1), arb(p.c0 - 1)
+    orders: list[arb_series] = []
+    for k in range(terms):
+        if k == 0:
+            right = arb_series([start])
+        else:
+            right = (b1 * w - c1) * orders[k - 1]
+            if k == 1:
+                right = right + c1
+        s = _coefficients(inner * right, flint.ctx.cap)
+        orders.append(outer * arb_series([c / (n + start) for n, c in enumerate(s)]))
+    return _Expansion(orders, [_bounds(p, terms, radius) for radius in CAUCHY_RADII])
+
+
+def _bounds(p: GaussParameters, terms: int, radius: float) -> list[arb]:
+    r = arb(radius)
+    largest = (r.exp() - 1) / r
+    smallest = (-r / 2).exp() * (r / 2).sin() / (r / 2)
+    w = r.exp() - 1
+    gain = (
+        _largest_power(smallest, largest, 1 - p.c0)
+        * _largest_power(smallest, largest, p.c0 - 2)
+        * ((abs(arb(p.b0)) + abs(1 - arb(p.b0))) * r).exp()
+        / arb(p.c0 - 1)
+    )
+    b1, c1 = abs(arb(p.b1)), abs(arb(p.c1))
+    result: list[arb] = []
+    for k in range(terms):
+        right = arb(p.c0 - 1) if k == 0 else (b1 * w + c1) * result[k - 1]
+        if k == 1:
+            right = right + c1
+        result.append(_upper(gain * right))
+    return result
+
+
+def _largest_power(smallest: arb, largest: arb, exponent: fmpq) -> arb:
+    """Bound |E|^exponent for smallest <= |E| <= largest."""
+    return (largest if exponent >= 0 else smallest) ** arb(exponent)
+
+
+def _exp_series(rate: fmpq) -> arb_series:
+    """Return exp(rate u)."""
+    return (arb_series([0, 1]) * arb(rate)).exp() if rate != 0 else arb_series([1])
+
+
+def _exp_minus_one_over_u() -> arb_series:
+    """Return E = (exp(u) - 1)/u = sum u^n / (n+1)!."""
+    coefficients, term = [], arb(1)
+    for n in range(flint.ctx.cap):
+        term = term / (n + 1)
+        coefficients.append(term)
+    return arb_series(coefficients)
+
+
+def _one_minus_exp_minus_u() -> arb_series:
+    """Return w = 1 - exp(-u), with an exact zero constant term."""
+    coefficients = list((-(_exp_series(fmpq(-1)))).coeffs())
+    coefficients[0] = arb(0)
+    return arb_series(coefficients)
+
+
+def _real_power(base: arb_series, exponent: fmpq) -> arb_series:
+    """Return base^exponent for a power series with constant term 1."""
+    if exponent == 0:
+        return arb_series([1])
+    if exponent.q == 1:
+        power = base ** abs(int(exponent.p))
+        return power if exponent > 0 else 1 / power
+    return (base.log() * arb(exponent)).exp()
