@@ -23,8 +23,11 @@ and the integrating factor u^(c0-1) E^(c0-1) exp(-b0 u), E = (exp(u)-1)/u, gives
 So every F_k is a power series in u with the radius 2 pi of E, computed once; a point costs the
 evaluation of polynomials.  In the part of the unit disc with Re w <= 1/2, |u| <= pi/3 (maximum
 principle; the maximum of |log(1-w)| over the boundary is at w = exp(+-i pi/3)), hence each term
-gains a factor 6.  For c0 <= 1 the contiguous relation F(b, c) = 1 + (b/c) w F(b+1, c+1) is used
-first.
+gains a factor 6.  For c0 <= 1 the first terms of the Taylor series are split off,
+
+    F(b, c) = sum_{n<m} (b)_n/(c)_n w^n + (b)_m/(c)_m w^m F(b+m, c+m),    c0 + m > 1,
+
+with coefficients that may carry a pole in eps.
 
 Bound
 -----
@@ -68,23 +71,17 @@ class GaussParameters:
     c0: fmpq
     c1: fmpq
 
-    def raised(self) -> GaussParameters:
-        """Return the parameters (b + 1, c + 1)."""
-        return GaussParameters(self.b0 + 1, self.b1, self.c0 + 1, self.c1)
+    def raised(self, steps: int) -> GaussParameters:
+        """Return the parameters (b + steps, c + steps)."""
+        return GaussParameters(self.b0 + steps, self.b1, self.c0 + steps, self.c1)
 
-    def ratio(self) -> EpsilonFactor:
-        """Return b/c exactly."""
-        return EpsilonFactor.linear_factor(self.b0, self.b1) / EpsilonFactor.linear_factor(
-            self.c0, self.c1
-        )
-
-
-@dataclass(frozen=True, slots=True)
-class _Expansion:
-    """Power series in u of each epsilon order, and bounds on |u| <= R for each radius R."""
-
-    orders: list[arb_series]
-    bounds: list[list[arb]]  # bounds[i][k] for CAUCHY_RADII[i]
+    def term(self, n: int) -> EpsilonFactor:
+        """Return the Taylor coefficient (b)_n / (c)_n, exactly."""
+        result = EpsilonFactor()
+        for j in range(n):
+            result = result * EpsilonFactor.linear_factor(self.b0 + j, self.b1)
+            result = result / EpsilonFactor.linear_factor(self.c0 + j, self.c1)
+        return result
 
 
 class GaussTable:
@@ -178,25 +175,53 @@ def gauss_table(
     The truncation error of every coefficient is below 2^-bits at any |u| <= 17/16, and is included
     in the balls returned.
     """
-    terms = max(highest - prefactor.lowest_order + 1, 1)
+    steps = max(0, 1 + math.floor(1 - int(parameters.c0.p) / int(parameters.c0.q)))
+    factors = [prefactor * parameters.term(n) for n in range(steps + 1)]
+    lowest = min([*(factor.lowest_order for factor in factors), highest])
+    terms = highest - lowest + 1
     guard = 40 + 8 * terms
+    high = parameters.raised(steps)
     with working_precision(bits + guard):
-        shape = _series_shape(parameters, terms)
-        length = _safe_length(shape, bits + 16)
-        with series_length(length), working_precision(bits + guard + length // 2):
-            expansion = _expand(parameters, terms)
-            factor = prefactor.series(terms)
-            orders = _times_factor(expansion.orders, factor.coefficients)
-            columns = [_coefficients(series, length) for series in orders]
-        weights = [abs(c) for c in factor.coefficients]
-        remainders = [
-            [
-                _upper(sum((weights[j] * bound[k - j] for j in range(k + 1)), start=arb(0)))
-                for bound in expansion.bounds
-            ]
-            for k in range(terms)
-        ]
-    return GaussTable(prefactor.lowest_order, columns, remainders, bits)
+        weights = [_coefficients_from(factor, lowest, terms) for factor in factors]
+        remainders = _remainders(high, weights, terms)
+        length = _safe_length(remainders, bits + 16)
+    with series_length(length), working_precision(bits + guard + length // 2):
+        weights = [_coefficients_from(factor, lowest, terms) for factor in factors]
+        w, power = _one_minus_exp_minus_u(), arb_series([1])
+        orders = [arb_series([0])] * terms
+        for row in weights[:-1]:
+            orders = [total + power * c for total, c in zip(orders, row, strict=True)]
+            power = power * w
+        shape = _times_factor(_expand(high, terms), weights[-1])
+        orders = [total + power * new for total, new in zip(orders, shape, strict=True)]
+        columns = [_coefficients(series, length) for series in orders]
+    return GaussTable(lowest, columns, remainders, bits)
+
+
+def _coefficients_from(factor: EpsilonFactor, lowest: int, terms: int) -> list[arb]:
+    """Return the coefficients of eps^lowest, ..., eps^(lowest + terms - 1)."""
+    wanted = lowest + terms - factor.lowest_order
+    if wanted <= 0:
+        return [arb(0)] * terms
+    series = factor.series(wanted)
+    return [real_part(series[k]) for k in range(lowest, lowest + terms)]
+
+
+def _remainders(high: GaussParameters, weights: list[list[arb]], terms: int) -> list[list[arb]]:
+    """Return, for each order and Cauchy radius, a bound on the whole function on |u| <= R."""
+    result: list[list[arb]] = [[] for _ in range(terms)]
+    for radius in CAUCHY_RADII:
+        size = arb(radius).exp() - 1  # |w| on the circle
+        bounds = _bounds(high, terms, radius)
+        for k in range(terms):
+            total = arb(0)
+            for n, row in enumerate(weights[:-1]):
+                total = total + abs(row[k]) * size**n
+            last, top = weights[-1], size ** (len(weights) - 1)
+            for j in range(k + 1):
+                total = total + top * abs(last[j]) * bounds[k - j]
+            result[k].append(_upper(total))
+    return result
 
 
 def _upper(x: arb) -> arb:
@@ -208,58 +233,27 @@ def _coefficients(series: arb_series, length: int) -> list[arb]:
     return found + [arb(0)] * (length - len(found))
 
 
-def _times_factor(orders: list[arb_series], factor: list[Ball]) -> list[arb_series]:
-    weights = [real_part(c) for c in factor]
+def _times_factor(orders: list[arb_series], factor: list[arb]) -> list[arb_series]:
     result = []
     for k in range(len(orders)):
-        total = orders[k] * weights[0]
+        total = orders[k] * factor[0]
         for j in range(1, k + 1):
-            if weights[j] != 0:
-                total = total + orders[k - j] * weights[j]
+            if factor[j] != 0:
+                total = total + orders[k - j] * factor[j]
         result.append(total)
     return result
 
 
-def _safe_length(bounds: list[list[arb]], bits: int) -> int:
+def _safe_length(remainders: list[list[arb]], bits: int) -> int:
     """Return the smallest length at which Cauchy's estimate is below 2^-bits at |u| = 17/16."""
     lengths = []
-    for radius, bound in zip(CAUCHY_RADII, bounds, strict=True):
-        worst = max(float((1 + b).log().upper()) for b in bound) / math.log(2)
+    for i, radius in enumerate(CAUCHY_RADII):
+        worst = max(float((1 + order[i]).log().upper()) for order in remainders) / math.log(2)
         lengths.append((bits + worst + 4) / math.log2(radius / LARGEST_RADIUS))
     return math.ceil(min(lengths)) + 1
 
 
-def _series_shape(parameters: GaussParameters, terms: int) -> list[list[arb]]:
-    """Return the bounds M_k on |u| <= R for each Cauchy radius, without expanding."""
-    with series_length(2):
-        return _expand(parameters, terms).bounds
-
-
-def _expand(parameters: GaussParameters, terms: int) -> _Expansion:
-    if parameters.c0 > 1:
-        return _expand_direct(parameters, terms)
-    # F(b, c) = 1 + (b/c) w F(b+1, c+1)
-    raised = _expand(parameters.raised(), terms)
-    factor = parameters.ratio().series(terms)
-    if factor.lowest != 0:
-        raise ValueError(f"2F1(1, b; c; w) with {parameters} has no regular expansion")
-    w = _one_minus_exp_minus_u()
-    orders = [w * series for series in _times_factor(raised.orders, factor.coefficients)]
-    orders[0] = orders[0] + 1
-    bounds = []
-    for radius, bound in zip(CAUCHY_RADII, raised.bounds, strict=True):
-        size = arb(radius).exp() - 1
-        weights = [abs(c) for c in factor.coefficients]
-        new = [
-            size * sum((weights[j] * bound[k - j] for j in range(k + 1)), start=arb(0))
-            for k in range(terms)
-        ]
-        new[0] = new[0] + 1
-        bounds.append([_upper(b) for b in new])
-    return _Expansion(orders, bounds)
-
-
-def _expand_direct(p: GaussParameters, terms: int) -> _Expansion:
+def _expand(p: GaussParameters, terms: int) -> list[arb_series]:
     """Apply (*) of the module text; needs c0 > 1."""
     base = _exp_minus_one_over_u()
     w = _one_minus_exp_minus_u()
@@ -276,7 +270,7 @@ def _expand_direct(p: GaussParameters, terms: int) -> _Expansion:
                 right = right + c1
         s = _coefficients(inner * right, flint.ctx.cap)
         orders.append(outer * arb_series([c / (n + start) for n, c in enumerate(s)]))
-    return _Expansion(orders, [_bounds(p, terms, radius) for radius in CAUCHY_RADII])
+    return orders
 
 
 def _bounds(p: GaussParameters, terms: int, radius: float) -> list[arb]:
