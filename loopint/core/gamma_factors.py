@@ -135,6 +135,11 @@ class EpsilonFactor:
         """Expand to `terms` orders, starting at `lowest_order`, at the working precision."""
         return _expand(self, terms, current_bits())
 
+    def series_through(self, highest: int) -> BallSeries:
+        """Expand through order `highest`; exactly zero if that is below the lowest order."""
+        terms = highest - self.lowest_order + 1
+        return self.series(terms) if terms > 0 else BallSeries.zero(highest)
+
 
 @lru_cache(maxsize=512)
 def _expand(factor: EpsilonFactor, terms: int, bits: int) -> BallSeries:  # noqa: ARG001 - cache key

@@ -76,6 +76,10 @@ class ExactComplex:
         """Return the number times a rational factor."""
         return ExactComplex(self.re * factor, self.im * factor)
 
+    def __truediv__(self, other: ExactComplex) -> ExactComplex:
+        norm = other.re * other.re + other.im * other.im
+        return (self * other.conjugate()).scaled(1 / norm)
+
     def conjugate(self) -> ExactComplex:
         """Return the complex conjugate."""
         return ExactComplex(self.re, -self.im)

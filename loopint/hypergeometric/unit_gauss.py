@@ -31,15 +31,22 @@ with coefficients that may carry a pole in eps.
 
 Bound
 -----
-On |u| <= R < 2 pi, from E = exp(u/2) sinh(u/2)/(u/2) and the product for sinh (DLMF 4.36.1),
+Write E = exp(u/2) S(u), S(u) = sinh(u/2)/(u/2).  With t = x u, 0 <= x <= 1, (*) is
 
-    exp(-R/2) sin(R/2)/(R/2) <= |E| <= (exp(R)-1)/R,     |w| <= exp(R) - 1,
+    F_k(u) = Int_0^1 dx x^(c0-2) exp( h (u-t) + t - u/2 ) [S(t)/S(u)]^(c0-2) r_k(t) / S(u),
+    h = b0 - (c0-2)/2.
 
-and (*) turns a bound M_(k-1) on |F_(k-1)| into M_k, the integral over the ray from 0 to u being at
-most max|s| / (c0-1).  Cauchy's estimate bounds the n-th coefficient by M_k R^-n.  That bound is
-far from sharp, so the table is computed to a length at which it is negligible, and shorter
-polynomials are cut from it whose tails are bounded by the computed coefficients themselves plus
-that remainder.
+On |u| <= R < 2 pi the product for sinh (DLMF 4.36.1) gives |S(u)| >= sin(R/2)/(R/2) = 1/K,
+|S| <= sinh(R/2)/(R/2), and |S(t)/S(u)| <= K, because |1+x^2 z| <= (1-x^2) + x^2 |1+z|.  Hence, for
+c0 >= 2 (else with the ratio of the bounds on |S|), the weighted suprema
+m_k = sup |F_k(u)| exp(-|h| |u|) obey
+
+    m_k <= K^(c0-1) exp(R/2)/(c0-1) * ( (|b1| (exp(R)-1) + |c1|) m_(k-1) + |c1| [k=1] ),
+
+m_0 <= K^(c0-1) exp(R/2), and Cauchy's estimate bounds the n-th coefficient of F_k by
+m_k exp(|h| R) R^-n.  That is far from sharp, so the table is computed to a length at which it is
+negligible, and shorter polynomials are cut from it whose tails are bounded by the computed
+coefficients themselves plus that remainder.
 """
 
 from __future__ import annotations
@@ -59,7 +66,7 @@ from loopint.core.precision import series_length, working_precision
 
 LARGEST_RADIUS = 17 / 16  # just above pi/3
 SHORTEST_RADIUS_EXPONENT = 40  # below 2^-40 of it the polynomials no longer get shorter by much
-CAUCHY_RADII = (2.0, 3.0, 4.0, 5.0, 5.5, 6.0)
+CAUCHY_RADII = (2.0, 2.5, 3.0, 3.5, 4.0, 4.5, 5.0, 5.5)
 
 
 @dataclass(frozen=True, slots=True)
@@ -274,29 +281,23 @@ def _expand(p: GaussParameters, terms: int) -> list[arb_series]:
 
 
 def _bounds(p: GaussParameters, terms: int, radius: float) -> list[arb]:
-    r = arb(radius)
-    largest = (r.exp() - 1) / r
-    smallest = (-r / 2).exp() * (r / 2).sin() / (r / 2)
-    w = r.exp() - 1
-    gain = (
-        _largest_power(smallest, largest, 1 - p.c0)
-        * _largest_power(smallest, largest, p.c0 - 2)
-        * ((abs(arb(p.b0)) + abs(1 - arb(p.b0))) * r).exp()
-        / arb(p.c0 - 1)
-    )
+    """Return M_k with |F_k(u)| <= M_k on |u| <= radius; see the module text."""
+    half = arb(radius) / 2
+    smallest = half.sin() / half  # of |S|
+    largest = half.sinh() / half
+    excess = arb(p.c0 - 2)
+    ratio = (1 / smallest) ** excess if p.c0 >= 2 else (largest / smallest) ** (-excess)
+    gain = ratio / smallest * half.exp() / arb(p.c0 - 1)
+    w = arb(radius).exp() - 1
     b1, c1 = abs(arb(p.b1)), abs(arb(p.c1))
-    result: list[arb] = []
+    weighted: list[arb] = []
     for k in range(terms):
-        right = arb(p.c0 - 1) if k == 0 else (b1 * w + c1) * result[k - 1]
+        right = arb(p.c0 - 1) if k == 0 else (b1 * w + c1) * weighted[k - 1]
         if k == 1:
             right = right + c1
-        result.append(_upper(gain * right))
-    return result
-
-
-def _largest_power(smallest: arb, largest: arb, exponent: fmpq) -> arb:
-    """Bound |E|^exponent for smallest <= |E| <= largest."""
-    return (largest if exponent >= 0 else smallest) ** arb(exponent)
+        weighted.append(_upper(gain * right))
+    growth = (abs(arb(p.b0) - excess / 2) * radius).exp()
+    return [_upper(growth * bound) for bound in weighted]
 
 
 def _exp_series(rate: fmpq) -> arb_series:

@@ -1,316 +1,194 @@
-"""Two propagators with integer powers: the bubble B(n1, n2).
+"""Two propagators with integer powers, in any integer dimension: the bubble B(n1, n2).
 
-One formula for every kinematic case
-------------------------------------
-With N(eps) = 1, mu = 1 and euclidean sign, B(1,1) = Gamma(-s) J with s = d/2 - 2 and
+With N(eps) = 1, mu = 1 and euclidean sign, N = n1 + n2 and s = d/2 - N,
 
-    J = Int_0^1 Q(x)^s dx,    Q(x) = x m1^2 + (1-x) m2^2 - x(1-x) p^2 - i0.
+    B(n1, n2) = Gamma(-s)/(Gamma(n1) Gamma(n2)) Int_0^1 x^(n1-1) (1-x)^(n2-1) Q(x)^s dx,
 
-Let R = sqrt(lambda), A1 = p^2 + m1^2 - m2^2, A2 = p^2 - m1^2 + m2^2; then
-A_i^2 = lambda + 4 p^2 m_i^2, and the roots of Q lie at 1-x = (A1 -+ R)/(2 p^2).  The primitive of
-Q^s that vanishes at the root x_a, by Euler's integral (DLMF 15.6.1) and Pfaff's transformation
-(DLMF 15.8.1), is
-
-    F_a(x) = (x-x_a) Q(x)^s f((x-x_a)/(x-x_b)) / (1+s),    f(w) = 2F1(1, -s; 2+s; w).
-
-Take at x = 1 and at x = 0 the nearer root.  With sigma_i = +-1 such that
-Re(sigma_i conj(A_i) R) >= 0 and D_i = A_i + sigma_i R this is
-
-    J = sum_i 2 m_i^2 / D_i * (m_i^2)^s f(w_i) / (1+s)  +  T,
-    w_i = 4 p^2 m_i^2 / D_i^2,     1 - w_i = 2 sigma_i R / D_i,     |w_i| <= 1,
-    T = sigma R/p^2 (-lambda/p^2 - i0)^s Gamma(1+s)^2/Gamma(2+2s)   if sigma_1 = sigma_2 = sigma,
-    T = 0                                                           otherwise.
-
-No difference of nearly equal numbers is left in w_i, 1-w_i and D_i: lambda and A_i are exact.
-
-Why it holds for complex masses (Im m^2 <= 0, p^2 real)
--------------------------------------------------------
-On [0,1], Im Q <= 0 and log Q is principal.  If the nearer root is the same for 0 and 1
-(sigma_1 = -sigma_2), the other root lies beyond the perpendicular bisector of the roots, so outside
-the triangle 0, x_a, 1, and J = F_a(1) - F_a(0).  Otherwise the bisector cuts [0,1] at some X.  On
-the bisector Q = -lambda/(4 p^2) (1 + t^2) with real t, so its phase is constant there, and the
-segment between the roots carries the same phase: the phase of Q(X), which is in [-pi, 0].  Hence
--lambda/p^2 has Im <= 0, and T, the integral between the roots, takes its principal logarithm (on
-the cut: from below).  Each half of the polygon 0, x_c, x_a, 1 lies on its side of the bisector,
-where the only root is its corner, so Q^s is continued without crossing a branch cut.
-
-Near w = 1 (threshold and pseudothreshold) f follows from DLMF 15.8.4,
-
-    f(w)/(1+s) = g(1-w)/(1+2s) + Gamma(1+s) Gamma(-1-2s)/Gamma(-s) (1-w)^(1+2s) w^(-1-s),
-    g(v) = 2F1(1, -s; -2s; v).
+a Feynman-parameter moment (`loopint.integrals.moments`) if both powers are positive, tadpoles
+(`loopint.integrals.numerators`) if one is not, and zero if neither is.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from functools import lru_cache
+from math import factorial
 
-from flint import acb, arb, fmpq
+from flint import arb, fmpq
 
 from loopint.core.conventions import Measure
-from loopint.core.errors import MorePrecisionNeeded, UnsupportedIntegralError
+from loopint.core.errors import UnsupportedIntegralError
 from loopint.core.gamma_factors import EpsilonFactor
-from loopint.core.kinematics import Region, TwoPoint, logarithm_below_cut
-from loopint.core.laurent import BallSeries, exponential
-from loopint.core.numbers import Ball, ExactComplex, real_part
-from loopint.core.precision import current_bits, working_precision
-from loopint.hypergeometric.unit_gauss import GaussParameters, GaussTable, gauss_table
-from loopint.integrals.tadpole import mass_power
+from loopint.core.kinematics import Region, TwoPoint
+from loopint.core.laurent import BallSeries
+from loopint.core.numbers import Ball, ExactComplex
+from loopint.core.precision import current_bits
+from loopint.integrals.moments import FeynmanMoment, ultraviolet_moment
+from loopint.integrals.numerators import tadpole_ratio
+from loopint.integrals.powers import times_mass_power
 
-HALF = arb(0.5)
+MAX_POWER = 12
+ISOLATED = "_isolated"
 
 
-def check(powers: tuple[int, ...], dimension: int) -> None:
-    """Refuse what is not covered: anything but powers (1, 1) in d0 = 4."""
-    if powers != (1, 1) or dimension != 4:
+def check(powers: tuple[int, ...], dimension: int) -> None:  # noqa: ARG001 - any dimension
+    """Refuse powers beyond +-12."""
+    if any(abs(n) > MAX_POWER for n in powers):
         raise UnsupportedIntegralError(
-            f"bubble with powers {list(powers)} in dimension {dimension}; "
-            "accepted: powers [1, 1], dimension 4"
+            f"bubble with powers {list(powers)}; "
+            f"accepted: integers from -{MAX_POWER} to {MAX_POWER}"
         )
 
 
 def method(point: TwoPoint, powers: tuple[int, ...], dimension: int) -> str:  # noqa: ARG001
-    """Return 'exact', 'elementary', 'gamma' or 'hypergeometric'."""
-    match point.region:
-        case Region.SCALELESS:
-            return "exact"
-        case Region.ZERO_MOMENTUM | Region.THRESHOLD | Region.PSEUDOTHRESHOLD | Region.ON_SHELL:
-            return "elementary"
-    if point.kallen.is_zero:
+    """Return 'exact' (zero), 'gamma', 'elementary' or 'hypergeometric'."""
+    n1, n2 = powers
+    if _vanishes(point, n1, n2):
+        return "exact"
+    if n1 <= 0 or n2 <= 0:
+        return "gamma"
+    if point.m1_squared.is_zero and point.m2_squared.is_zero:
+        return "gamma"
+    if point.p_squared == 0 or point.kallen.is_zero:
         return "elementary"
-    return "gamma" if point.m1_squared.is_zero and point.m2_squared.is_zero else "hypergeometric"
+    return "hypergeometric"
 
 
-@dataclass(frozen=True)
-class BubbleTables:
-    """Everything in prefactor * Int Q^s dx that does not depend on kinematics.
+def region(point: TwoPoint, powers: tuple[int, ...], dimension: int) -> str:
+    """Name the region; '_isolated' says that nearby points do not tend to the value.
 
-    With s = s0 - eps, and each through order `highest` at one precision:
-
-    far
-        prefactor f(w)/(1+s), for Re w <= 1/2
-    near, singular
-        prefactor g(1-w)/(1+2s), and the prefactor of the power of 1-w beside it
-    between_roots
-        prefactor Gamma(1+s)^2/Gamma(2+2s)
-    at_one
-        prefactor f(1)/(1+s) = prefactor/(1+2s), Gauss's sum (DLMF 15.4.20)
-    bare
-        prefactor
+    At threshold nearby points carry a term (-lambda)^(s+1/2), and on shell with a massless partner
+    a term (m^2-p^2)^(n+2s), n the power of the massive line.  Where its exponent is not positive at eps = 0, dimensional
+    regularisation still gives a finite value or a pole exactly there, but it is not a limit.
     """
-
-    s0: fmpq
-    far: GaussTable
-    near: GaussTable
-    singular: BallSeries
-    between_roots: BallSeries
-    at_one: BallSeries
-    bare: BallSeries
-
-
-@lru_cache(maxsize=256)
-def bubble_tables(twice_s0: int, prefactor: EpsilonFactor, highest: int, bits: int) -> BubbleTables:
-    """Build the tables for s0 = 0 or -1/2, shared by all points."""
-    s0, one = fmpq(twice_s0, 2), fmpq(1)
-    gamma, linear = EpsilonFactor.gamma, EpsilonFactor.linear_factor
-
-    def expanded(factor: EpsilonFactor) -> BallSeries:
-        terms = highest - factor.lowest_order + 1
-        return factor.series(terms) if terms > 0 else BallSeries.zero(highest)
-
-    with working_precision(bits + 32):
-        return BubbleTables(
-            s0=s0,
-            far=gauss_table(
-                GaussParameters(-s0, one, 2 + s0, -one),
-                prefactor / linear(1 + s0, -1),
-                highest,
-                bits,
-            ),
-            near=gauss_table(
-                GaussParameters(-s0, one, -2 * s0, 2 * one),
-                prefactor / linear(1 + 2 * s0, -2),
-                highest,
-                bits,
-            ),
-            singular=expanded(
-                prefactor * gamma(1 + s0, -1) * gamma(-1 - 2 * s0, 2) / gamma(-s0, 1)
-            ),
-            between_roots=expanded(
-                prefactor * gamma(1 + s0, -1) * gamma(1 + s0, -1) / gamma(2 + 2 * s0, -2)
-            ),
-            at_one=expanded(prefactor / linear(1 + 2 * s0, -2)),
-            bare=expanded(prefactor),
-        )
-
-
-@lru_cache(maxsize=256)
-def _unit_power_tables(dimension: int, measure: Measure, highest: int, bits: int) -> BubbleTables:
-    """Return the tables of B(1,1) with its prefactor measure * Gamma(-s)."""
-    twice_s0 = dimension - 4
-    prefactor = measure.factor(dimension) * EpsilonFactor.gamma(fmpq(-twice_s0, 2), 1)
-    return bubble_tables(twice_s0, prefactor, highest, bits)
+    name = str(point.region)
+    n1, n2 = powers
+    if n1 > 0 and n2 > 0:
+        twice_s = dimension - 2 * (n1 + n2)
+        massive = n2 if point.m1_squared.is_zero else n1
+        at_threshold = point.region is Region.THRESHOLD and twice_s <= -1
+        on_shell = point.region is Region.ON_SHELL and massive + twice_s <= 0
+        if at_threshold or on_shell:
+            name += ISOLATED
+    return name
 
 
 def series(
+    point: TwoPoint, powers: tuple[int, ...], dimension: int, highest: int, measure: Measure
+) -> BallSeries:
+    """Expand measure * B(n1, n2) through order `highest` at the working precision.
+
+    Orders below the true pole are exact zeros, and an ultraviolet pole is exact.
+    """
+    n1, n2 = powers
+    if _vanishes(point, n1, n2):
+        return BallSeries.zero(highest)
+    if n1 <= 0:
+        return _numerator(point.exchanged(), n2, -n1, dimension, highest, measure)
+    if n2 <= 0:
+        return _numerator(point, n1, -n2, dimension, highest, measure)
+    bits = current_bits()
+    moment = _moment(n1, n2, dimension, measure, highest, bits)
+    result = moment.integrate(point)
+    if point.m1_squared.is_zero and point.m2_squared.is_zero:
+        return result
+    return _clean(result, point, (n1, n2), dimension, highest, moment)
+
+
+def _vanishes(point: TwoPoint, n1: int, n2: int) -> bool:
+    """Whether the integral is scaleless, or a polynomial."""
+    if n1 <= 0 and n2 <= 0:
+        return True
+    if n1 <= 0:
+        return point.m2_squared.is_zero
+    if n2 <= 0:
+        return point.m1_squared.is_zero
+    return point.region is Region.SCALELESS
+
+
+@lru_cache(maxsize=256)
+def _moment(
+    n1: int, n2: int, dimension: int, measure: Measure, highest: int, bits: int
+) -> FeynmanMoment:
+    """Return the moment of B(n1, n2) with its prefactor and tables, shared by all points."""
+    s0 = fmpq(dimension, 2) - n1 - n2
+    prefactor = measure.factor(dimension) * EpsilonFactor.gamma(-s0, 1)
+    prefactor = prefactor * EpsilonFactor.constant(fmpq(1, factorial(n1 - 1) * factorial(n2 - 1)))
+    return FeynmanMoment(n1 - 1, n2 - 1, s0, prefactor, highest, bits)
+
+
+def _clean(
+    result: BallSeries,
     point: TwoPoint,
-    powers: tuple[int, ...],  # noqa: ARG001 - (1, 1) is the only case, see `check`
+    powers: tuple[int, int],
     dimension: int,
     highest: int,
-    measure: Measure,
+    moment: FeynmanMoment,
 ) -> BallSeries:
-    """Expand measure * B(1,1) through order `highest` at the working precision."""
-    if point.region is Region.SCALELESS or highest < -1:
+    """Replace what is known exactly: orders below the pole, and the ultraviolet pole."""
+    n1, n2 = powers
+    known: dict[int, Ball] = {}
+    lowest = -1 if _has_pole(point, n1, n2, dimension) else 0
+    if moment.s0 >= 0 and moment.s0.q == 1 and not point.snapped:
+        pole = ultraviolet_moment(point, n1 - 1, n2 - 1, int(moment.s0.p))
+        lead = moment.prefactor.series(1).coefficients[0]
+        known[-1] = (pole.ball() * lead) if not pole.is_zero else arb(0)
+    if highest < lowest:
         return BallSeries.zero(highest)
-    tables = _unit_power_tables(dimension, measure, highest, current_bits())
-    result = unit_power_integral(point, tables)
-    # J = 1 + O(eps): the pole is the exact leading coefficient of the prefactor
-    return BallSeries(-1, [tables.bare[-1], *(result[k] for k in range(highest + 1))])
+    return BallSeries(lowest, [known.get(k, result[k]) for k in range(lowest, highest + 1)])
 
 
-def unit_power_integral(point: TwoPoint, tables: BubbleTables) -> BallSeries:
-    """Expand prefactor * Int_0^1 Q(x)^s dx.
+def _has_pole(point: TwoPoint, n1: int, n2: int, dimension: int) -> bool:
+    """Whether B has a 1/eps pole, at least one mass being nonzero.
 
-    The point must not be scaleless; at s0 = -1/2 it must not be at threshold.
+    Ultraviolet for 2N <= d0 (even); infrared on a massless line of power n for 2n >= d0 (even), and
+    on shell for N < d0 <= n + N; and the threshold singularity in odd d0 for N < d0 < 2N.
     """
-    if point.p_squared == 0 and point.m1_squared == point.m2_squared:
-        return _mass_term(point.m1_squared, tables.bare, tables.s0)
-    first, second = _endpoints(point)
-    parts = [_endpoint_term(end, tables) for end in (first, second) if not end.m_squared.is_zero]
-    if first.sigma == second.sigma:
-        parts.append(_between_roots(point, first.sigma, tables))
-    total = parts[0]
-    for part in parts[1:]:
-        total = total + part
-    if point.masses_are_real and point.region is not Region.ABOVE_THRESHOLD:
-        return total.map(real_part)  # Q > 0 on (0,1)
-    return total
+    total, even = n1 + n2, dimension % 2 == 0
+    if even and 2 * total <= dimension:
+        return True
+    if point.m1_squared.is_zero or point.m2_squared.is_zero:
+        massless, massive = (n1, n2) if point.m1_squared.is_zero else (n2, n1)
+        if point.region is Region.ON_SHELL:
+            # Gamma(-s) Gamma(massive+2s)/Gamma(d-N)
+            return total < dimension <= 2 * massless + massive
+        m_squared = point.m2_squared if point.m1_squared.is_zero else point.m1_squared
+        if even and 2 * massless >= dimension:
+            return not _infrared_residue_vanishes(
+                point.p_squared, m_squared, massless, massive, dimension
+            )
+        return False
+    return point.region is Region.THRESHOLD and not even and total < dimension < 2 * total
 
 
-@dataclass(frozen=True, slots=True)
-class _Endpoint:
-    """One end of the Feynman-parameter interval seen from the nearer root of Q."""
+def _infrared_residue_vanishes(
+    p_squared: fmpq, m_squared: ExactComplex, massless: int, massive: int, dimension: int
+) -> bool:
+    """Whether the residue on a massless line is exactly zero at this point.
 
-    m_squared: ExactComplex
-    sigma: int
-    weight: Ball  # 2 m^2 / D
-    w: Ball
-    one_minus_w: Ball  # exactly zero when lambda = 0
+    It is proportional to 2F1(N-d0/2, n; d0/2; z), z = p^2/m^2, which for n >= d0/2 is a power of
+    1-z times the polynomial 2F1(d0-N, d0/2-n; d0/2; z) (Euler, DLMF 15.8.1).
+    """
+    half, total = dimension // 2, massless + massive
+    z = ExactComplex(p_squared) / m_squared
+    term = value = ExactComplex(fmpq(1))
+    for j in range(massless - half):
+        ratio = fmpq((dimension - total + j) * (half - massless + j), (half + j) * (1 + j))
+        term = (term * z).scaled(ratio)
+        value = value + term
+    return value.is_zero
 
 
-def _endpoints(point: TwoPoint) -> tuple[_Endpoint, _Endpoint]:
-    m1, m2 = point.m1_squared, point.m2_squared
-    p2 = ExactComplex(point.p_squared)
-    if point.kallen.is_zero:
-        return _degenerate_endpoints(point)
-    size = point.kallen
-    root = size.ball().sqrt() if size.re > 0 or size.im != 0 else acb(0, arb(-size.re).sqrt())
-    a1, a2 = p2 + m1 - m2, p2 - m1 + m2
-    sigma1 = _nearer_root(a1, size, root)
-    sigma2 = _nearer_root(a2, size, root, tie=-sigma1)
-    return (
-        _endpoint(m1, a1, sigma1, root, point.p_squared),
-        _endpoint(m2, a2, sigma2, root, point.p_squared),
+def _numerator(
+    point: TwoPoint, power: int, numerator: int, dimension: int, highest: int, measure: Measure
+) -> BallSeries:
+    """Expand measure * B(power, -numerator); the massive line is the first."""
+    factor = measure.factor(dimension) * EpsilonFactor.gamma(1 - fmpq(dimension, 2), 1)
+    terms = highest - factor.lowest_order + 1
+    if terms <= 0:
+        return BallSeries.zero(highest)
+    ratio = tadpole_ratio(
+        point.p_squared, point.m1_squared, point.m2_squared, power, numerator, dimension, terms
     )
-
-
-def _endpoint(
-    m_squared: ExactComplex, a: ExactComplex, sigma: int, root: Ball, p_squared: fmpq
-) -> _Endpoint:
-    signed = root if sigma > 0 else -root
-    d = a.ball() + signed
-    weight = m_squared.scaled(fmpq(2)).ball() / d
-    w = 2 * arb(p_squared) * weight / d
-    return _Endpoint(m_squared, sigma, weight, w, 2 * signed / d)
-
-
-def _nearer_root(a: ExactComplex, size: ExactComplex, root: Ball, tie: int = 1) -> int:
-    """Return the sign that makes Re(sigma conj(A) R) >= 0, decided exactly where it is zero.
-
-    It is zero if and only if A^2 conj(lambda) is real and <= 0 (|w| = 1: both roots are equally
-    near, and either sign is right).
-    """
-    if a.is_real and size.is_real:
-        if size.re < 0 or a.re == 0:
-            return tie
-        return 1 if a.re > 0 else -1
-    square = a * a * size.conjugate()
-    if square.is_real and square.re <= 0:
-        return tie
-    projection = real_part(a.conjugate().ball() * root)
-    if projection > 0:
-        return 1
-    if projection < 0:
-        return -1
-    raise MorePrecisionNeeded
-
-
-def _degenerate_endpoints(point: TwoPoint) -> tuple[_Endpoint, _Endpoint]:
-    """Treat lambda = 0: Q is a square, w = 1, and 2 m_i^2/A_i is m1/(m1 +- m2), m2/(m2 +- m1).
-
-    For a snapped point p^2 is defined by the masses, so A_i is not available as a rational.
-    """
-    m1, m2 = point.m1_squared, point.m2_squared
-    one, zero = arb(1), arb(0)
-    if point.snapped:
-        root1, root2 = arb(m1.re).sqrt(), arb(m2.re).sqrt()
-        if point.snapped_onto is Region.PSEUDOTHRESHOLD:
-            root2 = -root2
-        weights: tuple[Ball, Ball] = (root1 / (root1 + root2), root2 / (root1 + root2))
-    else:
-        p2 = ExactComplex(point.p_squared)
-        a1, a2 = p2 + m1 - m2, p2 - m1 + m2  # A_i^2 = 4 p^2 m_i^2
-        weights = (_ratio(m1, a1), _ratio(m2, a2))
-    return (
-        _Endpoint(m1, 1, weights[0], one, zero),
-        _Endpoint(m2, -1, weights[1], one, zero),
-    )
-
-
-def _ratio(m_squared: ExactComplex, a: ExactComplex) -> Ball:
-    if m_squared.is_zero:
-        return arb(0)
-    return m_squared.scaled(fmpq(2)).ball() / a.ball()
-
-
-def _endpoint_term(end: _Endpoint, tables: BubbleTables) -> BallSeries:
-    """Expand prefactor * weight * (m^2)^s * f(w)/(1+s)."""
-    if end.one_minus_w == 0:
-        value = tables.at_one
-    elif real_part(end.w) <= HALF:
-        value = tables.far.evaluate(-(-end.w).log1p())
-    else:
-        value = _near_one(end, tables)
-    return _mass_term(end.m_squared, value, tables.s0).scaled(end.weight)
-
-
-def _near_one(end: _Endpoint, tables: BubbleTables) -> BallSeries:
-    v, s0 = end.one_minus_w, tables.s0
-    log_w = (-v).log1p()
-    singular = tables.singular
-    # v^(1+2s) w^(-1-s) at eps = 0
-    constant = v / end.w if s0 == 0 else ((1 + 2 * s0) * v.log() - (1 + s0) * log_w).exp()
-    singular = _times_exponential(singular, log_w - 2 * v.log()).scaled(constant)
-    return tables.near.evaluate(-log_w) + singular
-
-
-def _between_roots(point: TwoPoint, sigma: int, tables: BubbleTables) -> BallSeries:
-    """Expand prefactor * T, the integral from one root of Q to the other."""
-    height = point.kallen.scaled(-1 / point.p_squared).ball()  # 4 Q half-way between the roots
-    logarithm = logarithm_below_cut(height)
-    constant = sigma * point.kallen.ball().sqrt() / arb(point.p_squared)
-    if tables.s0 != 0:
-        constant = constant * (arb(tables.s0) * logarithm).exp()
-    return _times_exponential(tables.between_roots, -logarithm).scaled(constant)
-
-
-def _mass_term(m_squared: ExactComplex, value: BallSeries, s0: fmpq) -> BallSeries:
-    """Return value * (m^2)^(s0 - eps)."""
-    power, logarithm = mass_power(m_squared, s0)
-    result = _times_exponential(value, -logarithm)
-    return result if s0 == 0 else result.scaled(power)
-
-
-def _times_exponential(value: BallSeries, rate: Ball) -> BallSeries:
-    """Return value * exp(rate eps)."""
-    return value * BallSeries(0, exponential(rate, len(value.coefficients)))
+    exact = BallSeries(0, [c.ball() for c in ratio])
+    tadpole = times_mass_power(point.m1_squared, factor.series(terms), fmpq(dimension, 2) - 1)
+    return tadpole * exact

@@ -33,6 +33,8 @@ class Family:
         Powers when none are given; its length is the number of propagators.
     check
         `check(powers, dimension)` raises `UnsupportedIntegralError` for what is not covered.
+    region
+        `region(point, powers, dimension)` names where the point lies.
     method
         `method(point, powers, dimension)` names how the value is computed.
     series
@@ -43,6 +45,7 @@ class Family:
     name: str
     default_powers: Powers
     check: Callable[[Powers, int], None]
+    region: Callable[..., str]
     method: Callable[..., str]
     series: Callable[..., BallSeries]
 
@@ -50,8 +53,8 @@ class Family:
 FAMILIES: dict[str, Family] = {
     family.name: family
     for family in (
-        Family("tadpole", (1,), tadpole.check, tadpole.method, tadpole.series),
-        Family("bubble", (1, 1), bubble.check, bubble.method, bubble.series),
+        Family("tadpole", (1,), tadpole.check, tadpole.region, tadpole.method, tadpole.series),
+        Family("bubble", (1, 1), bubble.check, bubble.region, bubble.method, bubble.series),
     )
 }
 
@@ -155,7 +158,8 @@ def evaluate(
         return series
 
     series, bits, proven = prove(compute, (lowest, highest), digits, max_precision_bits, accept)
-    region = str(point.region) + ("_snapped" if point.snapped else "")
+    region = family.region(point, integral.powers, integral.dimension)
+    region += "_snapped" if point.snapped else ""
     method = family.method(reduced, integral.powers, integral.dimension)
     return Evaluation(series, integral.orders, digits, region, method, bits, proven)
 

@@ -14,13 +14,13 @@ from flint import fmpq
 
 from loopint.core.errors import UnsupportedIntegralError
 from loopint.core.gamma_factors import EpsilonFactor
-from loopint.core.laurent import BallSeries, exponential
+from loopint.core.laurent import BallSeries
 from loopint.core.precision import current_bits, working_precision
+from loopint.integrals.powers import times_mass_power
 
 if TYPE_CHECKING:
     from loopint.core.conventions import Measure
     from loopint.core.kinematics import OnePoint
-    from loopint.core.numbers import Ball, ExactComplex
 
 MAX_POWER = 100
 
@@ -33,6 +33,11 @@ def check(powers: tuple[int, ...], dimension: int) -> None:  # noqa: ARG001 - an
         )
 
 
+def region(point: OnePoint, powers: tuple[int, ...], dimension: int) -> str:  # noqa: ARG001
+    """Return 'massive', 'complex_mass' or 'scaleless'."""
+    return str(point.region)
+
+
 def method(point: OnePoint, powers: tuple[int, ...], dimension: int) -> str:  # noqa: ARG001
     """Return 'exact' where the integral is exactly zero, else 'gamma'."""
     return "exact" if point.m_squared.is_zero or powers[0] <= 0 else "gamma"
@@ -43,9 +48,8 @@ def _prefactor(power: int, dimension: int, measure: Measure, highest: int, bits:
     """Expand measure * Gamma(n - d/2)/Gamma(n), shared by all points."""
     gamma = EpsilonFactor.gamma
     factor = measure.factor(dimension) * gamma(power - fmpq(dimension, 2), 1) / gamma(power, 0)
-    terms = highest - factor.lowest_order + 1
     with working_precision(bits + 32):
-        return factor.series(terms) if terms > 0 else BallSeries.zero(highest)
+        return factor.series_through(highest)
 
 
 def series(
@@ -60,17 +64,4 @@ def series(
     if point.m_squared.is_zero or n <= 0:
         return BallSeries.zero(highest)
     factor = _prefactor(n, dimension, measure, highest, current_bits())
-    constant, logarithm = mass_power(point.m_squared, fmpq(dimension, 2) - n)
-    rest = BallSeries(0, exponential(-logarithm, len(factor.coefficients)))
-    return (factor * rest).scaled(constant)
-
-
-def mass_power(m_squared: ExactComplex, exponent: fmpq) -> tuple[Ball, Ball]:
-    """Return ((m^2)^exponent, log m^2) for a nonzero m^2 and an exponent that is a multiple of 1/2.
-
-    m^2 is real and positive or in the lower half-plane, where the principal values are the ones
-    of m^2 - i0.
-    """
-    ball = m_squared.ball()
-    power = ball ** int(exponent.p) if exponent.q == 1 else ball.sqrt() ** int(exponent.p)
-    return power, ball.log()
+    return times_mass_power(point.m_squared, factor, fmpq(dimension, 2) - n)
