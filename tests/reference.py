@@ -26,9 +26,7 @@ def msbar_gamma_series(terms: int) -> list[mpmath.mpf]:
     exponent += [mpmath.zeta(k) * (-1) ** k / k for k in range(2, terms)]
     result = [mpmath.mpf(1)]
     for n in range(1, terms):
-        result.append(
-            mpmath.fsum(k * exponent[k] * result[n - k] for k in range(1, n + 1)) / n
-        )
+        result.append(mpmath.fsum(k * exponent[k] * result[n - k] for k in range(1, n + 1)) / n)
     return result
 
 
@@ -69,9 +67,7 @@ def bubble_by_quadrature(
         }
 
 
-def _log_moments(
-    p: mpmath.mpf, a: mpmath.mpc, b: mpmath.mpc, highest: int
-) -> list[mpmath.mpc]:
+def _log_moments(p: mpmath.mpf, a: mpmath.mpc, b: mpmath.mpc, highest: int) -> list[mpmath.mpc]:
     """Return Int_0^1 (-log Q)^k / k! dx for k = 0 .. highest."""
     centre = (p - mpmath.re(a) + mpmath.re(b)) / (2 * p) if p else mpmath.mpf(-1)
     corners: list[mpmath.mpc] = [mpmath.mpf(0), mpmath.mpf(1)]

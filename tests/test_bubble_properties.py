@@ -76,9 +76,7 @@ def test_mu_dependence(p: Fraction, m1: object, m2: object, mu: Fraction) -> Non
 @given(rationals, positive, positive)
 def test_propagator_sign(p: Fraction, m1: Fraction, m2: Fraction) -> None:
     """Two propagators: the two sign conventions agree; one propagator: they differ by a sign."""
-    agree(
-        loopint.bubble(p, m1, m2), loopint.bubble(p, m1, m2, propagator_sign="euclidean")
-    )
+    agree(loopint.bubble(p, m1, m2), loopint.bubble(p, m1, m2, propagator_sign="euclidean"))
     a = loopint.tadpole(m1)
     b = loopint.tadpole(m1, propagator_sign="euclidean")
     with mpmath.workdps(60):
@@ -152,7 +150,9 @@ def test_continuity_in_a_vanishing_width_and_mass() -> None:
             light = loopint.bubble(p, small, 2, orders=(-1, 3))
             massless = loopint.bubble(p, 0, 2, orders=(-1, 3))
             with mpmath.workdps(40):
-                tolerance = mpmath.mpf(10) ** -power * 200 * (3 * power) ** 4 + mpmath.mpf(10) ** -26
+                tolerance = (
+                    mpmath.mpf(10) ** -power * 200 * (3 * power) ** 4 + mpmath.mpf(10) ** -26
+                )
                 for k in real:
                     assert abs(real[k] - unstable[k]) < tolerance
                     assert abs(light[k] - massless[k]) < tolerance

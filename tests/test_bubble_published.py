@@ -304,7 +304,8 @@ def test_once_subtracted_dispersion_relation() -> None:
     with mpmath.workdps(20):
         for order in (0, 1):
             left = (
-                loopint.bubble(p, 1, 1, digits=20)[order] - loopint.bubble(0, 1, 1, digits=20)[order]
+                loopint.bubble(p, 1, 1, digits=20)[order]
+                - loopint.bubble(0, 1, 1, digits=20)[order]
             )
             assert abs(left.real - integral(order)) < mpmath.mpf(10) ** -11
 
@@ -315,6 +316,7 @@ def test_once_subtracted_dispersion_relation() -> None:
 @pytest.mark.parametrize("p", ["-3", "0.2", "2.25", "9", "30"])
 def test_against_double_exponential_quadrature(p: str, m1: object, m2: object) -> None:
     """Takahasi-Mori quadrature of the Feynman parameter in mpmath, orders -1..3."""
+
     def pair(value: object) -> object:
         return tuple(map(Fraction, value)) if isinstance(value, tuple) else Fraction(value)
 

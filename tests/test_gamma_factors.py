@@ -22,8 +22,7 @@ def summed(factor: EpsilonFactor) -> mpmath.mpf:
     with working_precision(300):
         series = factor.series(TERMS)
         numbers = {
-            k: mpf_with_bound(series[k], 70)[0]
-            for k in range(series.lowest, series.highest + 1)
+            k: mpf_with_bound(series[k], 70)[0] for k in range(series.lowest, series.highest + 1)
         }
     return mpmath.fsum(value * EPSILON**k for k, value in numbers.items())
 
@@ -31,9 +30,7 @@ def summed(factor: EpsilonFactor) -> mpmath.mpf:
 @settings(max_examples=60, deadline=None)
 @given(
     st.lists(
-        st.tuples(
-            st.integers(-7, 7), st.integers(-3, 3).filter(bool), st.sampled_from([1, -1])
-        ),
+        st.tuples(st.integers(-7, 7), st.integers(-3, 3).filter(bool), st.sampled_from([1, -1])),
         min_size=1,
         max_size=4,
     )

@@ -50,8 +50,25 @@ def test_input_is_taken_exactly(value: object, expected: Fraction) -> None:
 
 @pytest.mark.parametrize(
     "value",
-    [math.nan, math.inf, "nan", "inf", "", "1/0", "abc", "1e20001", None, True, [1], "0x10", 1j,
-     "9" * 30_000, Decimal("NaN"), mpmath.mpf("inf"), np.float64("nan")],
+    [
+        math.nan,
+        math.inf,
+        "nan",
+        "inf",
+        "",
+        "1/0",
+        "abc",
+        "1e20001",
+        None,
+        True,
+        [1],
+        "0x10",
+        1j,
+        "9" * 30_000,
+        Decimal("NaN"),
+        mpmath.mpf("inf"),
+        np.float64("nan"),
+    ],
 )
 def test_other_input_is_refused_with_one_sentence(value: object) -> None:
     with pytest.raises(InputError) as caught:

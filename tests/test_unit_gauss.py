@@ -18,7 +18,9 @@ ONE = EpsilonFactor()
 
 
 def parameters(b0: object, b1: object, c0: object, c1: object) -> GaussParameters:
-    return GaussParameters(*(fmpq(*x) if isinstance(x, tuple) else fmpq(x) for x in (b0, b1, c0, c1)))
+    return GaussParameters(
+        *(fmpq(*x) if isinstance(x, tuple) else fmpq(x) for x in (b0, b1, c0, c1))
+    )
 
 
 BUBBLE = parameters(0, 1, 2, -1)  # 2F1(1, eps; 2-eps; w)

@@ -283,7 +283,7 @@ def mpf_with_bound(ball: arb, digits: int) -> tuple[mpmath.mpf, mpmath.mpf]:
     mantissa, exponent = _man_exp(ball.mid())
     bits = math.ceil(digits * BITS_PER_DIGIT) + 8
     raw = from_man_exp(mantissa, exponent, bits, "n")
-    rounded = _dyadic(-raw[1] if raw[0] else raw[1], raw[2])
+    rounded = _dyadic(int(-raw[1] if raw[0] else raw[1]), int(raw[2]))  # gmpy2 integers occur
     bound = from_man_exp(*_distance_upper(ball, rounded), 32, "u")
     return mpmath.mp.make_mpf(raw), mpmath.mp.make_mpf(bound)
 
