@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from fractions import Fraction
 from functools import lru_cache
+from itertools import pairwise
 from typing import TypeAlias
 
 import mpmath
@@ -81,7 +82,7 @@ def _log_moments(p: mpmath.mpf, a: mpmath.mpc, b: mpmath.mpc, highest: int) -> l
         ]
     sums = [mpmath.mpc(0)] * (highest + 1)
     precision = mpmath.mp.prec
-    for start, end in zip(corners[:-1], corners[1:], strict=True):
+    for start, end in pairwise(corners):
         length = end - start
         for left, right, weight in tanh_sinh_nodes(precision):
             if end == 1 and right < left:

@@ -228,10 +228,10 @@ def test_dimensional_recurrence(kind: str, powers: tuple[int, int]) -> None:
 
 
 def test_textbook_bubble_in_two_and_three_dimensions() -> None:
-    """d = 3: (1/(2 p)) atan-type, d = 2 at p = 0: 1/m^2; euclidean p_E^2 = -p^2 (textbook).
+    """d = 3: Int d^3q/(8 pi^3) 1/((q^2+m^2)((q+k)^2+m^2)) = atan(k/2m)/(4 pi k), k^2 = -p^2.
 
-    Int d^3q/pi^(3/2) 1/((q^2+m^2)((q+p)^2+m^2)) = pi^(3/2) ... = sqrt(pi) 2 atan(p/2m)/p * ...;
-    normalised so that p -> 0 gives Gamma(1/2) m^-1 / 1.
+    Rajantie, hep-ph/9606216, appendix (from memory); divided by pi^(3/2)/(8 pi^3) it is
+    2 sqrt(pi) atan(k/2m)/k.  d = 2 at p = 0: Gamma(1) (m^2)^-1.
     """
     with mpmath.workdps(40):
         m, p = mpmath.mpf(3) / 2, mpmath.mpf(2)

@@ -220,7 +220,8 @@ def test_all_order_expansion_in_log_sine_integrals(p: str, m1: str, m2: str) -> 
     With N = 1/Gamma(1+eps), tau_i = arccos((m_i^2 - m_j^2 + p^2)/(2 m_i sqrt(p^2))), from memory:
 
     2 (1-2 eps) B = (m1^-2eps + m2^-2eps)/eps + (m1^2-m2^2)/(eps p^2) (m1^-2eps - m2^-2eps)
-      + (-lambda)^(1/2-eps)/(p^2)^(1-eps) sum_j (2 eps)^j/j! sum_i [Ls_{j+1}(pi) - Ls_{j+1}(2 tau_i)].
+      + (-lambda)^(1/2-eps)/(p^2)^(1-eps)
+        sum_j (2 eps)^j/j! sum_i [Ls_{j+1}(pi) - Ls_{j+1}(2 tau_i)].
     """
     with mpmath.workdps(40):
         q, a, b = mpmath.mpf(p), mpmath.mpf(m1), mpmath.mpf(m2)

@@ -73,10 +73,17 @@ class RationalFunction:
     def __truediv__(self, other: RationalFunction | int) -> RationalFunction:
         if isinstance(other, int):
             return _reduced(self.numerator, self.denominator * other)
-        if other.is_zero:
-            raise ZeroDivisionError("division by a rational function that is zero")
-        sign = 1 if other.numerator.leading_coefficient() > 0 else -1
-        return self * RationalFunction(sign * other.denominator, sign * other.numerator)
+        return self * other.inverse()
+
+    def __rtruediv__(self, other: int) -> RationalFunction:
+        return self.inverse() * other
+
+    def inverse(self) -> RationalFunction:
+        """Return one over the function."""
+        if self.is_zero:
+            raise ZeroDivisionError("one over a rational function that is zero")
+        sign = 1 if self.numerator.leading_coefficient() > 0 else -1
+        return RationalFunction(sign * self.denominator, sign * self.numerator)
 
     def __repr__(self) -> str:
         return f"RationalFunction({self.numerator}, {self.denominator})"

@@ -57,8 +57,9 @@ def region(point: TwoPoint, powers: tuple[int, ...], dimension: int) -> str:
     """Name the region; '_isolated' says that nearby points do not tend to the value.
 
     At threshold nearby points carry a term (-lambda)^(s+1/2), and on shell with a massless partner
-    a term (m^2-p^2)^(n+2s), n the power of the massive line.  Where its exponent is not positive at eps = 0, dimensional
-    regularisation still gives a finite value or a pole exactly there, but it is not a limit.
+    a term (m^2-p^2)^(n+2s), n the power of the massive line.  Where that exponent is not positive
+    at eps = 0, dimensional regularisation still gives a finite value or a pole exactly there, but
+    it is not a limit.
     """
     name = str(point.region)
     n1, n2 = powers

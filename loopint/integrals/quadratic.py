@@ -2,10 +2,13 @@
 
 One formula for every kinematic case
 ------------------------------------
-With Q(x) = x m1^2 + (1-x) m2^2 - x(1-x) p^2 - i0 let R = sqrt(lambda),
-A1 = p^2 + m1^2 - m2^2, A2 = p^2 - m1^2 + m2^2; then A_i^2 = lambda + 4 p^2 m_i^2, and the roots of Q lie at 1-x = (A1 -+ R)/(2 p^2).  The primitive of
-Q^s that vanishes at the root x_a, by Euler's integral (DLMF 15.6.1) and Pfaff's transformation
-(DLMF 15.8.1), is
+With Q(x) = x m1^2 + (1-x) m2^2 - x(1-x) p^2 - i0 let
+
+    R = sqrt(lambda),    A1 = p^2 + m1^2 - m2^2,    A2 = p^2 - m1^2 + m2^2,
+
+so that A_i^2 = lambda + 4 p^2 m_i^2, and the roots of Q lie at 1-x = (A1 -+ R)/(2 p^2).  The
+primitive of Q^s that vanishes at the root x_a, by Euler's integral (DLMF 15.6.1) and Pfaff's
+transformation (DLMF 15.8.1), is
 
     F_a(x) = (x-x_a) Q(x)^s f((x-x_a)/(x-x_b)) / (1+s),    f(w) = 2F1(1, -s; 2+s; w).
 

@@ -25,11 +25,10 @@ At p^2 = 0 with different masses B(1, 1) is itself a difference of two tadpoles.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
-from functools import cached_property, lru_cache
-from math import comb
+from functools import lru_cache
+from math import comb, prod
 from types import MappingProxyType
 from typing import TYPE_CHECKING, TypeAlias
 
@@ -38,6 +37,8 @@ from loopint.core.errors import InputError, UnsupportedIntegralError
 from loopint.core.rational_functions import RationalFunction, variables
 
 if TYPE_CHECKING:
+    from collections.abc import Callable, Mapping
+
     import sympy
     from flint import fmpz_mpoly
 
@@ -296,62 +297,59 @@ def _reduce(
 ) -> Reduction:
     steps = (dimension - master_dimension) // 2
     if steps >= 0:
-        found = _raised(kinematics, _relations(kinematics, 0).bubble(n1, n2), steps)
+        found = _to_lower_dimension(kinematics, _relations(kinematics, 0).bubble(n1, n2), steps)
     else:
-        found = _lowered(_relations(kinematics, -2 * steps), n1, n2, -steps)
-    coefficients = {}
+        found = _in_higher_dimension(_relations(kinematics, -2 * steps), n1, n2, -steps)
+    coefficients: dict[Master, sympy.Expr] = {}
     for index, value in sorted(found.items()):
         if value.is_zero:
             continue
         master = _master(kinematics, index, master_dimension, -2 * steps)
-        flips = (n1 + n2 - len(master.powers)) % 2 and sign is PropagatorSign.MINKOWSKI
-        coefficients[master] = _expression(-value if flips else value)
+        differs = (n1 + n2 - len(master.powers)) % 2 and sign is PropagatorSign.MINKOWSKI
+        coefficients[master] = _expression(-value if differs else value)
     return Reduction((n1, n2), dimension, kinematics, sign, MappingProxyType(coefficients))
 
 
-def _lowered(relations: _Relations, n1: int, n2: int, steps: int) -> Combination:
-    """Reduce an integral in D - 2 steps to masters in D, by (3)."""
-    total: Combination = {}
+def _in_higher_dimension(relations: _Relations, n1: int, n2: int, steps: int) -> Combination:
+    """Reduce B(n1, n2) in d dimensions to masters in d + 2 steps: (3), `steps` times."""
+    terms = []
     for i in range(steps + 1):
         j = steps - i
         weight = comb(steps, i) * _rising(n1, i) * _rising(n2, j)
         if weight:
-            total = _sum(total, relations.bubble(n1 + i, n2 + j), weight)
-    return total
+            terms.append((relations.bubble(n1 + i, n2 + j), weight))
+    return _combined(*terms)
 
 
-def _raised(kinematics: Kinematics, found: Combination, steps: int) -> Combination:
-    """Replace masters in d by masters in d - 2 steps, by (3) solved for the higher dimension."""
+def _to_lower_dimension(kinematics: Kinematics, found: Combination, steps: int) -> Combination:
+    """Replace masters in d by masters in d - 2 steps: (3) solved for the higher dimension."""
     for step in range(steps):
         relations = _relations(kinematics, -2 * step)
-        d, total = relations.d, {}  # type: RationalFunction, Combination
-        remaining = dict(found)
+        lowered: Combination = {}
         if BUBBLE in found:
-            # B^(d-2)(1,1) = e B^(d)(1,1) + tadpoles
-            lower = _sum(relations.bubble(2, 1), relations.bubble(1, 2))
-            weight = remaining.pop(BUBBLE) / lower.pop(BUBBLE)
-            total = {BUBBLE: weight}
-            remaining = _sum(remaining, lower, -weight)
-        for index, value in remaining.items():
-            # A^(d-2)(1) = A^(d)(2) = (2-d)/(2 m^2) A^(d)(1)
-            total[index] = value * 2 * relations.masses[index] / (2 - d)
-        found = total
+            # B^(d-2)(1,1) = B^(d)(2,1) + B^(d)(1,2) = weight B^(d)(1,1) + tadpoles
+            below = _combined((relations.bubble(2, 1), 1), (relations.bubble(1, 2), 1))
+            lowered[BUBBLE] = found[BUBBLE] / below[BUBBLE]
+            found = _combined((found, 1), (below, -lowered[BUBBLE]))
+        for index, value in found.items():
+            if index != BUBBLE:  # A^(d-2)(1) = A^(d)(2) = (2-d)/(2 m^2) A^(d)(1)
+                lowered[index] = 2 * relations.masses[index] * value / (2 - relations.d)
+        found = lowered
     return found
 
 
 def _rising(n: int, steps: int) -> int:
-    product = 1
-    for j in range(steps):
-        product *= n + j
-    return product
+    """Return n (n+1) ... (n+steps-1)."""
+    return prod(range(n, n + steps))
 
 
-def _sum(a: Combination, b: Combination, weight: RationalFunction | int = 1) -> Combination:
-    """Return a + weight * b."""
-    total = dict(a)
-    for index, value in b.items():
-        term = value * weight
-        total[index] = total[index] + term if index in total else term
+def _combined(*terms: tuple[Combination, RationalFunction | int]) -> Combination:
+    """Return the sum of combinations times weights."""
+    total: Combination = {}
+    for combination, weight in terms:
+        for index, value in combination.items():
+            term = value * weight
+            total[index] = total[index] + term if index in total else term
     return total
 
 
@@ -364,35 +362,23 @@ class _Relations:
         d + offset.
     p, masses
         p^2, and (m1^2, m2^2).
+    c, kallen
+        As in the module text.
     """
 
     def __init__(self, kinematics: Kinematics, offset: int) -> None:
-        names, assign = _VARIABLES[kinematics]
-        first, *others = variables(("d", *names))
-        zero = first - first
-        self.d = first + offset
-        self.zero, self.one = zero, zero + 1
-        self.p, m1, m2 = assign(zero, *others)
+        names, assign = VARIABLES[kinematics]
+        d, *others = variables(("d", *names))
+        zero = d - d
+        self.d, self.one = d + offset, zero + 1
+        self.p, m1, m2 = (zero if value is None else value for value in assign(*others))
         self.masses = (m1, m2)
+        self.c = m1 + m2 - self.p
+        self.kallen = self.c * self.c - 4 * m1 * m2
         self._known: dict[tuple[int, int], Combination] = {}
 
-    @cached_property
-    def c(self) -> RationalFunction:
-        """m1^2 + m2^2 - p^2."""
-        return self.masses[0] + self.masses[1] - self.p
-
-    @cached_property
-    def kallen(self) -> RationalFunction:
-        """lambda."""
-        return self.c * self.c - 4 * self.masses[0] * self.masses[1]
-
-    @cached_property
-    def equal(self) -> bool:
-        """Whether the two propagators are the same."""
-        return self.p.is_zero and self.masses[0] == self.masses[1]
-
     def tadpole(self, line: int, n: int) -> Combination:
-        """Return A(n) of line 0 or 1: A(n) = A(1) prod_(0<k<n) (k - d/2)/(k m^2)."""
+        """Return A(n) of line 0 or 1: A(n) = A(1) prod_(0<k<n) (2k-d)/(2k m^2)."""
         m = self.masses[line]
         if n <= 0 or m.is_zero:
             return {}
@@ -403,106 +389,162 @@ class _Relations:
 
     def bubble(self, n1: int, n2: int) -> Combination:
         """Return B(n1, n2)."""
-        key = (n1, n2)
-        if key not in self._known:
-            self._known[key] = self._find(n1, n2)
-        return self._known[key]
+        found = self._known.get((n1, n2))
+        if found is None:
+            found = self._known[n1, n2] = self._find(n1, n2)
+        return found
 
     def _find(self, n1: int, n2: int) -> Combination:
-        if self.equal:
+        if self.p.is_zero and self.masses[0] == self.masses[1]:
             return self.tadpole(1, n1 + n2)
         if n1 <= 0 or n2 <= 0:
-            return self._numerator(n1, n2)
+            return self._numerator(0, n1, -n2) if n1 > 0 else self._numerator(1, n2, -n1)
         if self.kallen.is_zero:
             return self._on_shell(n1, n2) if self.c.is_zero else self._degenerate(n1, n2)
         if (n1, n2) == (1, 1):
             return self._first_bubble()
-        return self._lowered(0, n1, n2) if n1 > 1 else self._lowered(1, n2, n1)
+        return self._general(0, n1, n2) if n1 > 1 else self._general(1, n2, n1)
 
-    def _ordered(self, line: int, n: int, other: int) -> Combination:
+    def _on_lines(self, line: int, n: int, other: int) -> Combination:
         """Return the bubble with power n on `line` and `other` on the other line."""
         return self.bubble(n, other) if line == 0 else self.bubble(other, n)
 
-    def _numerator(self, n1: int, n2: int) -> Combination:
-        """Return a bubble in which one power is j = 0, -1, -2, ...; the other is n.
-
-        (1) lowers n to 1; there (1) and (2) together lower j.
-        """
-        line, n, j = (0, n1, -n2) if n1 > 0 else (1, n2, -n1)
-        if n <= 0 or self.masses[line].is_zero:
+    def _numerator(self, line: int, n: int, j: int) -> Combination:
+        """Return the bubble with power n on `line` and a numerator, power -j, on the other."""
+        m, other = self.masses[line], self.masses[1 - line]
+        if n <= 0 or m.is_zero:
             return {}
         if j == 0:
             return self.tadpole(line, n)
-        m, other, c, d = self.masses[line], self.masses[1 - line], self.c, self.d
-        B = lambda n, j: self._ordered(line, n, -j)
-        if n > 1:
-            total = _sum({}, B(n - 1, j), 2 * (n - 1) + -j - d)
-            total = _sum(total, B(n - 1, j - 1), j * c)
-            total = _sum(total, B(n - 2, j - 1), self.one * -j)
-            return (
-                _sum({}, total, 1 / (2 * (n - 1) * m))
-                if False
-                else _sum({}, total, self.one / (2 * (n - 1) * m))
+        c, d = self.c, self.d
+
+        def bubble(n: int, j: int) -> Combination:
+            return self._on_lines(line, n, -j)
+
+        if n > 1:  # (1) at (n-1, -j)
+            i = n - 1
+            return _combined(
+                (bubble(i, j), (2 * i - j - d) / (2 * i * m)),
+                (bubble(i, j - 1), j * c / (2 * i * m)),
+                (bubble(i - 1, j - 1), -j / (2 * i * m)),
             )
-        # B(2, -j) by (2) at (1, 1-j), then B(1, -j) by (1)
-        second = _sum({}, B(1, j - 1), d + (2 * j - 3))
-        second = _sum(second, B(1, j - 2), 2 * (1 - j) * other) if j > 1 else second
-        second = _sum(second, B(2, j - 1), c)
-        total = _sum({}, B(1, j - 1), j * c)
-        total = _sum(total, second, -2 * m)
-        return _sum({}, total, self.one / (d - 2 + j))
+        # (2) at (1, 1-j) gives B(2, -j), and with it (1) at (1, -j) gives B(1, -j).
+        second = [(bubble(1, j - 1), d + (2 * j - 3)), (bubble(2, j - 1), c)]
+        if j > 1:
+            second.append((bubble(1, j - 2), 2 * (1 - j) * other))
+        return _combined(
+            (bubble(1, j - 1), j * c / (d + (j - 2))),
+            (_combined(*second), -2 * m / (d + (j - 2))),
+        )
 
     def _first_bubble(self) -> Combination:
+        """Return B(1, 1), a master unless p^2 = 0."""
         if not self.p.is_zero:
             return {BUBBLE: self.one}
         # 1/(D1 D2) = (1/D1 - 1/D2)/(D2 - D1), D2 - D1 = m2^2 - m1^2
-        weight = self.one / (self.masses[1] - self.masses[0])
-        return _sum(_sum({}, self.tadpole(0, 1), weight), self.tadpole(1, 1), -weight)
+        weight = 1 / (self.masses[1] - self.masses[0])
+        return _combined((self.tadpole(0, 1), weight), (self.tadpole(1, 1), -weight))
 
-    def _lowered(self, line: int, n: int, k: int) -> Combination:
-        """Return the bubble with n >= 2 on `line`, k >= 1 on the other, if lambda != 0.
+    def _general(self, line: int, n: int, k: int) -> Combination:
+        """Return the bubble with n > 1 on `line`, k >= 1 on the other, for lambda != 0.
 
-        (1) and (2) at (n-1, k), solved for the first line.
+        (1) and (2) at (n-1, k), solved for the integral with the higher power on `line`.
         """
-        i, other, c = n - 1, self.masses[1 - line], self.c
-        here = self._ordered(line, i, k)
-        total = _sum({}, here, 2 * other * (2 * i + k - self.d) - c * (2 * k + i - self.d))
-        total = _sum(total, self._ordered(line, i - 1, k + 1), 2 * k * other)
-        total = _sum(total, self._ordered(line, i + 1, k - 1), -i * c)
-        return _sum({}, total, self.one / (-i * self.kallen))
+        i, other, c, d = n - 1, self.masses[1 - line], self.c, self.d
+        scale = 1 / (i * self.kallen)
+        here = 2 * other * (d - (2 * i + k)) - c * (d - (2 * k + i))
+        return _combined(
+            (self._on_lines(line, i, k), here * scale),
+            (self._on_lines(line, i - 1, k + 1), -2 * k * other * scale),
+            (self._on_lines(line, i + 1, k - 1), i * c * scale),
+        )
 
     def _degenerate(self, n: int, k: int) -> Combination:
         """Return B(n, k) for lambda = 0 and c != 0.
 
-        If k > 1, by (1) at (n, k-1).  Else by 2 m2^2 (1) - c (2) at (n, 1), in which the highest
-        terms cancel, and with B(n-1, 2) from (1) at (n-1, 1):
+        For k > 1 by (1) at (n, k-1).  For k = 1 the highest terms cancel in 2 m2^2 (1) - c (2) at
+        (n, 1); with B(n-1, 2) from (1) at (n-1, 1) this is
 
-            (2 m2^2 - c)(d-2n-1) B(n,1) = -c n A(n+1)
-                + (2 m2^2/c) [ (2n-1-d) B(n-1,1) + B(n-2,2) ].
+            (2 m2^2 - c) (d-2n-1) B(n, 1)
+                = -c n A1(n+1) + (2 m2^2/c) [ (2n-1-d) B(n-1, 1) + B(n-2, 2) ],
 
-        For n = 1 the bracket is c A2(2), by (1) at (0, 1).
+        where for n = 1 the bracket is c A2(2).
         """
         (m1, m2), c, d = self.masses, self.c, self.d
         if k > 1:
             i = k - 1
-            total = _sum({}, self.bubble(n, i), 2 * n + i - d)
-            total = _sum(total, self.bubble(n + 1, i), -2 * n * m1)
-            total = _sum(total, self.bubble(n - 1, k), i)
-            return _sum({}, total, self.one / (i * c))
-        total = _sum({}, self.tadpole(0, n + 1), -n * c)
+            return _combined(
+                (self.bubble(n, i), (2 * n + i - d) / (i * c)),
+                (self.bubble(n + 1, i), -2 * n * m1 / (i * c)),
+                (self.bubble(n - 1, k), 1 / c),
+            )
         if n == 1:
-            total = _sum(total, self.tadpole(1, 2), 2 * m2)
+            bracket = _combined((self.tadpole(1, 2), c))
         else:
-            bracket = _sum({}, self.bubble(n - 1, 1), 2 * n - 1 - d)
-            bracket = _sum(bracket, self.bubble(n - 2, 2))
-            total = _sum(total, bracket, 2 * m2 / c)
-        return _sum({}, total, self.one / ((2 * m2 - c) * (d - (2 * n + 1))))
+            bracket = _combined((self.bubble(n - 1, 1), 2 * n - 1 - d), (self.bubble(n - 2, 2), 1))
+        scale = 1 / ((2 * m2 - c) * (d - (2 * n + 1)))
+        return _combined((self.tadpole(0, n + 1), -n * c * scale), (bracket, 2 * m2 / c * scale))
 
     def _on_shell(self, n: int, k: int) -> Combination:
-        """Return B(n, k) for m1 = 0 and p^2 = m2^2: (d-2n-k) B(n,k) = k B(n-1,k+1)."""
-        return _sum({}, self.bubble(n - 1, k + 1), k * self.one / (self.d - (2 * n + k)))
+        """Return B(n, k) for m1 = 0, p^2 = m2^2: (d-2n-k) B(n, k) = k B(n-1, k+1), by (1)."""
+        return _combined((self.bubble(n - 1, k + 1), k / (self.d - (2 * n + k))))
 
 
 @lru_cache(maxsize=64)
 def _relations(kinematics: Kinematics, offset: int) -> _Relations:
     return _Relations(kinematics, offset)
+
+
+def _master(kinematics: Kinematics, index: int, dimension: int, offset: int) -> Master:
+    if index == BUBBLE:
+        return Master("B", (1, 1), None, dimension, offset)
+    names, _ = VARIABLES[kinematics]
+    if "m_squared" in names:
+        return Master("A", (1,), "m_squared", dimension, offset)
+    mass = f"m{index + 1}"
+    return Master(
+        f"A{index + 1}", (1,), mass if mass in names else f"{mass}_squared", dimension, offset
+    )
+
+
+def _latex_name(master: Master) -> str:
+    stem = master.name[0] + (f"_{master.name[1:]}" if master.name[1:] else "")
+    shift = f"{master.dimension_offset:+d}" if master.dimension_offset else ""
+    return f"{stem}^{{(d{shift})}}({', '.join(map(str, master.powers))})"
+
+
+def _expression(value: RationalFunction) -> sympy.Expr:
+    """Write a rational function as a factorised sympy expression."""
+    import sympy  # noqa: PLC0415 - slow to import, and needed only for expressions
+
+    return sympy.Mul(_factorised(value.numerator), 1 / _factorised(value.denominator))
+
+
+def _factorised(polynomial: fmpz_mpoly) -> sympy.Expr:
+    import sympy  # noqa: PLC0415
+
+    symbols = [sympy.Symbol(name) for name in polynomial.context().names()]
+    content, factors = polynomial.factor()
+    parts = [sympy.Integer(int(content))]
+    for factor, power in factors:
+        terms = {powers: int(c) for powers, c in factor.to_dict().items()}
+        parts.append(sympy.Poly.from_dict(terms, *symbols).as_expr() ** int(power))
+    return sympy.Mul(*parts)
+
+
+Scale: TypeAlias = "RationalFunction | None"  # None: zero
+Assignment: TypeAlias = "Callable[..., tuple[Scale, Scale, Scale]]"
+
+# The variables of each kinematics, and p^2, m1^2, m2^2 in terms of them.
+VARIABLES: dict[Kinematics, tuple[tuple[str, ...], Assignment]] = {
+    Kinematics.GENERAL: (("p_squared", "m1_squared", "m2_squared"), lambda p, x, y: (p, x, y)),
+    Kinematics.EQUAL_MASS: (("p_squared", "m_squared"), lambda p, m: (p, m, m)),
+    Kinematics.ONE_MASSLESS: (("p_squared", "m_squared"), lambda p, m: (p, None, m)),
+    Kinematics.BOTH_MASSLESS: (("p_squared",), lambda p: (p, None, None)),
+    Kinematics.ZERO_MOMENTUM: (("m1_squared", "m2_squared"), lambda x, y: (None, x, y)),
+    Kinematics.ZERO_MOMENTUM_EQUAL_MASS: (("m_squared",), lambda m: (None, m, m)),
+    Kinematics.ZERO_MOMENTUM_ONE_MASSLESS: (("m_squared",), lambda m: (None, None, m)),
+    Kinematics.THRESHOLD: (("m1", "m2"), lambda a, b: ((a + b) * (a + b), a * a, b * b)),
+    Kinematics.PSEUDOTHRESHOLD: (("m1", "m2"), lambda a, b: ((a - b) * (a - b), a * a, b * b)),
+    Kinematics.ON_SHELL: (("m_squared",), lambda m: (m, None, m)),
+}

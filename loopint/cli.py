@@ -1,0 +1,197 @@
+"""The command line: one function per command, no logic."""
+
+# ruff: noqa: PLC0415 - the commands import the heavy modules, so that `--help` answers at once
+
+from __future__ import annotations
+
+import json
+import sys
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from loopint.core.errors import LoopintError
+
+app = typer.Typer(
+    name="loopint",
+    add_completion=False,
+    no_args_is_help=True,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+)
+UNUSABLE = 2
+INTERRUPTED = 130
+CONFIG = Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file of the run.")]
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        from loopint import __version__
+
+        typer.echo(f"loopint {__version__}")
+        raise typer.Exit
+
+
+@app.callback()
+def loopint(
+    version: Annotated[
+        bool,
+        typer.Option("--version", callback=_version, is_eager=True, help="Print the version."),
+    ] = False,
+) -> None:
+    """One-loop scalar integrals over many kinematic points, every number with a proven error bound.
+
+    Exit codes: 0 done; 2 unusable config, input or arguments; 3 finished, but some rows were
+    rejected, stayed below the asked digits, or failed the cross-check.
+    """
+
+
+@app.command(epilog="Example: loopint run configs/quickstart.toml --workers 2")
+def run(
+    config: CONFIG,
+    overwrite: Annotated[
+        bool, typer.Option("--overwrite", help="Replace the results of an earlier run.")
+    ] = False,
+    workers: Annotated[
+        int | None,
+        typer.Option(min=1, max=1024, help="Worker processes, instead of [execution] workers."),
+    ] = None,
+) -> None:
+    """Evaluate and cross-check all points; an interrupted run continues."""
+    from loopint.console import progress_bar, show_run
+    from loopint.pipeline.config import load_config
+    from loopint.pipeline.run import run_config
+
+    settings = load_config(config)
+    try:
+        with progress_bar("evaluating") as progress:
+            outcome = run_config(settings, overwrite=overwrite, workers=workers, progress=progress)
+    except KeyboardInterrupt:
+        typer.echo("loopint: interrupted; the same command continues", err=True)
+        raise typer.Exit(INTERRUPTED) from None
+    show_run(outcome)
+    raise typer.Exit(outcome.exit_code)
+
+
+@app.command(epilog="Example: loopint validate configs/quickstart.toml")
+def validate(config: CONFIG) -> None:
+    """Check config and points without evaluating: regions, rejected rows, estimated time."""
+    from loopint.console import progress_bar, show_survey
+    from loopint.pipeline.config import load_config
+    from loopint.pipeline.estimate import survey_config
+
+    with progress_bar("checking") as progress:
+        survey = survey_config(load_config(config), progress=progress)
+    show_survey(survey)
+    raise typer.Exit(survey.exit_code)
+
+
+@app.command(
+    epilog="""\b
+Examples:
+  loopint point bubble --p-squared 5 --m1-squared 1 --m2-squared 1/4 --orders -1,2
+  loopint point bubble --p-squared -1 --m1 1.2 --width1 0.01 --m2 0 --cross-check
+  loopint point tadpole --m-squared 1,-1/10 --powers 2 --digits 50 --json"""
+)
+def point(
+    family: Annotated[str, typer.Argument(metavar="FAMILY", help="tadpole or bubble.")],
+    *,
+    p_squared: Annotated[
+        str | None, typer.Option(metavar="NUMBER", help="p^2, any sign: 0.25, 1e-3, -1/4.")
+    ] = None,
+    m1_squared: Annotated[
+        str | None, typer.Option(metavar="NUMBER", help="Squared mass; complex: re,im.")
+    ] = None,
+    m2_squared: Annotated[str | None, typer.Option(metavar="NUMBER")] = None,
+    m1: Annotated[
+        str | None, typer.Option("--m1", metavar="NUMBER", help="Mass, with --width1 optional.")
+    ] = None,
+    width1: Annotated[str | None, typer.Option("--width1", metavar="NUMBER")] = None,
+    m2: Annotated[str | None, typer.Option("--m2", metavar="NUMBER")] = None,
+    width2: Annotated[str | None, typer.Option("--width2", metavar="NUMBER")] = None,
+    m_squared: Annotated[
+        str | None, typer.Option(metavar="NUMBER", help="Squared mass of a tadpole.")
+    ] = None,
+    m: Annotated[str | None, typer.Option("--m", metavar="NUMBER")] = None,
+    width: Annotated[str | None, typer.Option(metavar="NUMBER")] = None,
+    powers: Annotated[
+        str | None, typer.Option(metavar="N[,N]", help="Powers of the propagators (default 1).")
+    ] = None,
+    dimension: Annotated[int, typer.Option(metavar="D0", help="d = D0 - 2 eps, 1 to 12.")] = 4,
+    orders: Annotated[
+        str, typer.Option(metavar="LOW,HIGH", help="Powers of epsilon, inclusive.")
+    ] = "-1,0",
+    digits: Annotated[int, typer.Option(metavar="N", help="Proven digits, 5 to 2000.")] = 30,
+    mu_squared: Annotated[str, typer.Option(metavar="NUMBER", help="mu^2 > 0.")] = "1",
+    propagator_sign: Annotated[
+        str, typer.Option(metavar="NAME", help="minkowski or euclidean.")
+    ] = "minkowski",
+    measure: Annotated[
+        str, typer.Option(metavar="NAME", help="msbar, plain, gamma, r_gamma or two_pi.")
+    ] = "msbar",
+    snap_tolerance: Annotated[
+        str,
+        typer.Option(metavar="NUMBER", help="Move p^2 onto a threshold within this distance."),
+    ] = "0",
+    max_precision_bits: Annotated[
+        int, typer.Option(metavar="BITS", help="Cap on the working precision.")
+    ] = 20_000,
+    as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
+    cross_check: Annotated[
+        bool, typer.Option("--cross-check", help="Compare with an independent quadrature.")
+    ] = False,
+) -> None:
+    """Evaluate one integral at one point."""
+    from loopint.console import show_point
+    from loopint.pipeline.single import evaluate_point
+
+    result = evaluate_point(
+        family,
+        {
+            "p_squared": p_squared,
+            "m1_squared": m1_squared,
+            "m1": m1,
+            "width1": width1,
+            "m2_squared": m2_squared,
+            "m2": m2,
+            "width2": width2,
+            "m_squared": m_squared,
+            "m": m,
+            "width": width,
+        },
+        powers=powers,
+        dimension=dimension,
+        orders=orders,
+        digits=digits,
+        mu_squared=mu_squared,
+        propagator_sign=propagator_sign,
+        measure=measure,
+        max_precision_bits=max_precision_bits,
+        snap_tolerance=snap_tolerance,
+        check=cross_check,
+    )
+    if as_json:
+        typer.echo(json.dumps(result.as_dict(), indent=2))
+    else:
+        show_point(result)
+    raise typer.Exit(result.exit_code)
+
+
+def main() -> None:
+    """Run the command line; every error becomes one sentence on stderr and exit code 2."""
+    try:
+        app()
+    except LoopintError as error:
+        message = str(error)
+    except OSError as error:
+        what = error.strerror or str(error)
+        message = f"{error.filename}: {what}" if error.filename else what
+    except MemoryError:
+        message = "out of memory; accepted: a smaller [execution] chunk_rows or fewer workers"
+    typer.echo(f"loopint: {message}", err=True)
+    sys.exit(UNUSABLE)
+
+
+if __name__ == "__main__":
+    main()

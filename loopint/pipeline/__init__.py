@@ -1,0 +1,1 @@
+"""From a config and a table of points to certified tables: the middle floor."""

@@ -1,0 +1,535 @@
+"""The config of a run: read from TOML, checked, and every mistake explained in one sentence."""
+
+from __future__ import annotations
+
+import json
+import tomllib
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from decimal import Decimal, InvalidOperation
+from functools import cached_property
+from pathlib import Path
+from typing import Annotated, Any, Literal, NamedTuple, Self, TypeAlias, cast
+
+from pydantic import (
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    PrivateAttr,
+    ValidationError,
+    model_validator,
+)
+from pydantic_core import CoreSchema, core_schema
+
+from loopint.core.conventions import Measure, PropagatorSign
+from loopint.core.errors import InputError
+from loopint.integrals.proof import DEFAULT_MAX_PRECISION_BITS, MAX_DIGITS, MIN_DIGITS
+from loopint.integrals.registry import FAMILIES, Integral
+from loopint.pipeline.errors import ConfigError, unknown_name
+from loopint.pipeline.expressions import Expression, parse_expression
+
+__all__ = [
+    "AccuracyConfig",
+    "ConfigError",
+    "ConventionsConfig",
+    "CrossCheckConfig",
+    "ExecutionConfig",
+    "IntegralConfig",
+    "MassKeys",
+    "OutputConfig",
+    "PointsConfig",
+    "RunConfig",
+    "config_as_dict",
+    "load_config",
+]
+
+
+def _exact_number(value: object) -> object:
+    """Let an integer stand where a decimal is expected; never a boolean or a binary float."""
+    return Decimal(value) if isinstance(value, int) and not isinstance(value, bool) else value
+
+
+def _path(value: object) -> object:
+    return Path(value) if isinstance(value, str) and value.strip() else value
+
+
+def _expression(value: object) -> Expression:
+    if isinstance(value, Expression):
+        return value
+    if isinstance(value, str):
+        return parse_expression(value)
+    if isinstance(value, int) and not isinstance(value, bool):
+        return parse_expression(value)
+    if isinstance(value, Decimal) and value.is_finite():
+        return parse_expression(str(value))
+    if isinstance(value, list | tuple):
+        raise InputError(f"{_toml(value)} is complex; accepted: a real number or expression")
+    raise ValueError  # the description of the field says what is accepted
+
+
+def _complex_expression(value: object) -> ComplexExpression:
+    if isinstance(value, list | tuple):
+        if len(value) != 2:
+            raise InputError(f"{_toml(value)} has {len(value)} entries; accepted: [re, im]")
+        return _expression(value[0]), _expression(value[1])
+    return _expression(value)
+
+
+@dataclass(frozen=True)
+class _ReadBy:
+    """Tell pydantic that a function alone reads a field, so that it asks nothing of the type."""
+
+    read: Callable[[object], object]
+
+    def __get_pydantic_core_schema__(self, source: Any, handler: object) -> CoreSchema:  # noqa: ANN401
+        return core_schema.no_info_plain_validator_function(self.read)
+
+
+ComplexExpression: TypeAlias = Expression | tuple[Expression, Expression]
+ExactNumber: TypeAlias = Annotated[Decimal, BeforeValidator(_exact_number)]
+FilePath: TypeAlias = Annotated[Path, BeforeValidator(_path)]
+Real: TypeAlias = Annotated[Expression | None, _ReadBy(_expression)]
+Squared: TypeAlias = Annotated[ComplexExpression | None, _ReadBy(_complex_expression)]
+
+REAL = "a number, a column, or arithmetic on columns"
+SQUARED = f"{REAL}; complex: an array [re, im] of these"
+
+
+class _Section(BaseModel):
+    """A part of the config; the description of a field says what it accepts."""
+
+    model_config = ConfigDict(
+        frozen=True, extra="forbid", strict=True, arbitrary_types_allowed=True
+    )
+
+
+class PointsConfig(_Section):
+    """`[points]`: where the kinematic points are."""
+
+    file: FilePath = Field(description="the path of a Parquet file or of a directory of them")
+    key: str | None = Field(
+        default=None, min_length=1, description="the name of a column carried through to the tables"
+    )
+
+
+class MassKeys(NamedTuple):
+    """The keys that give the mass of one line; `imaginary` is the second entry of an array."""
+
+    squared: str
+    mass: str
+    width: str
+
+    @property
+    def imaginary(self) -> str:
+        """What the imaginary part of the squared mass is called in messages."""
+        return f"Im {self.squared}"
+
+
+_MASS_KEYS = {
+    1: (MassKeys("m_squared", "m", "width"),),
+    2: tuple(MassKeys(f"m{i}_squared", f"m{i}", f"width{i}") for i in (1, 2)),
+}
+
+
+class IntegralConfig(_Section):
+    """`[[integral]]`: one integral, and its kinematics in terms of columns."""
+
+    name: str = Field(
+        pattern=r"^[A-Za-z][A-Za-z0-9_]*$",
+        description="a letter followed by letters, digits and underscores",
+    )
+    family: str = Field(description=" or ".join(FAMILIES))
+    powers: tuple[int, ...] = Field(
+        default=(), description="an array of integers, one per propagator"
+    )
+    dimension: int = Field(default=4, description="an integer from 1 to 12")
+    orders: tuple[int, int] = Field(
+        default=(-1, 0), description="an array [lowest, highest] of integers"
+    )
+    p_squared: Real = Field(default=None, description=REAL)
+    m_squared: Squared = Field(default=None, description=SQUARED)
+    m: Real = Field(default=None, description=REAL)
+    width: Real = Field(default=None, description=REAL)
+    m1_squared: Squared = Field(default=None, description=SQUARED)
+    m1: Real = Field(default=None, description=REAL)
+    width1: Real = Field(default=None, description=REAL)
+    m2_squared: Squared = Field(default=None, description=SQUARED)
+    m2: Real = Field(default=None, description=REAL)
+    width2: Real = Field(default=None, description=REAL)
+
+    @model_validator(mode="before")
+    @classmethod
+    def _parse_integral(cls, data: object) -> object:
+        """Check family, powers, dimension and orders together, as they depend on one another."""
+        if not isinstance(data, Mapping) or not isinstance(data.get("family"), str):
+            return data
+        if set(data) - set(cls.model_fields):
+            return data  # the unknown key is the better message
+        given = {key: _plain(data.get(key)) for key in ("powers", "dimension", "orders")}
+        orders = given["orders"] if "orders" in data else (-1, 0)
+        if not isinstance(orders, list | tuple):
+            raise InputError(f"orders = {_toml(orders)}; accepted: [lowest, highest], as [-1, 2]")
+        integral = Integral.parse(
+            data["family"],
+            given["powers"],
+            given["dimension"] if "dimension" in data else 4,
+            cast("tuple[int, int]", orders),  # checked there
+        )
+        return {
+            **data,
+            "powers": integral.powers,
+            "dimension": integral.dimension,
+            "orders": integral.orders,
+        }
+
+    @model_validator(mode="after")
+    def _check_kinematics(self) -> Self:
+        given = [key for key in _KINEMATIC_KEYS if getattr(self, key) is not None]
+        accepted = [key for keys in self.mass_keys for key in keys]
+        if len(self.mass_keys) == 2:
+            accepted.insert(0, "p_squared")
+        for key in given:
+            if key not in accepted:
+                raise InputError(
+                    f"{key} does not belong to a {self.family}; accepted: {', '.join(accepted)}"
+                )
+        if "p_squared" in accepted and self.p_squared is None:
+            raise InputError(f"p_squared is missing; accepted: {REAL}")
+        for squared, mass, width in self.mass_keys:
+            if squared not in given and mass not in given:
+                hint = f"{width} needs {mass}" if width in given else "no mass is given"
+                raise InputError(f"{hint}; accepted: {squared}, or {mass} with or without {width}")
+            for other in (mass, width):
+                if squared in given and other in given:
+                    raise InputError(
+                        f"{squared} and {other} are both given; "
+                        f"accepted: {squared}, or {mass} with or without {width}"
+                    )
+        return self
+
+    @property
+    def mass_keys(self) -> tuple[MassKeys, ...]:
+        """The keys of each line of this family."""
+        return _MASS_KEYS[len(FAMILIES[self.family].default_powers)]
+
+    @cached_property
+    def integral(self) -> Integral:
+        """Family, powers, dimension and orders as the mathematics takes them."""
+        return Integral.parse(self.family, self.powers, self.dimension, self.orders)
+
+    def expressions(self) -> dict[str, Expression]:
+        """Return the kinematics by key; an imaginary part goes by `MassKeys.imaginary`."""
+        found: dict[str, Expression] = {}
+        for key in _KINEMATIC_KEYS:
+            value: ComplexExpression | None = getattr(self, key)
+            if isinstance(value, tuple):
+                found[key], found[f"Im {key}"] = value
+            elif value is not None:
+                found[key] = value
+        return found
+
+
+_KINEMATIC_KEYS = ("p_squared", *(key for lines in _MASS_KEYS.values() for k in lines for key in k))
+
+
+class ConventionsConfig(_Section):
+    """`[conventions]`: what multiplies the bare integral."""
+
+    mu_squared: Annotated[Expression, _ReadBy(_expression)] = Field(
+        default=parse_expression(1), description=f"{REAL}, positive"
+    )
+    propagator_sign: PropagatorSign = Field(
+        default=PropagatorSign.MINKOWSKI, strict=False, description=" or ".join(PropagatorSign)
+    )
+    measure: Measure = Field(default=Measure.MSBAR, strict=False, description=", ".join(Measure))
+
+
+class AccuracyConfig(_Section):
+    """`[accuracy]`: the digits to be proven."""
+
+    digits: int = Field(
+        default=16,
+        ge=MIN_DIGITS,
+        le=MAX_DIGITS,
+        description=f"an integer from {MIN_DIGITS} to {MAX_DIGITS}",
+    )
+    snap_tolerance: ExactNumber = Field(
+        default=Decimal(0),
+        ge=0,
+        lt=Decimal("0.1"),
+        description="a number from 0 to below 0.1 (0: off)",
+    )
+    max_precision_bits: int = Field(
+        default=DEFAULT_MAX_PRECISION_BITS,
+        ge=64,
+        le=1_000_000,
+        description="an integer from 64 to 1000000",
+    )
+
+
+class CrossCheckConfig(_Section):
+    """`[cross_check]`: how much is integrated again by quadrature."""
+
+    fraction: Annotated[Decimal, Field(ge=0, le=1)] | Literal["all", "none"] = Field(
+        default=Decimal("0.01"), description='a number from 0 to 1, "all" or "none"'
+    )
+    digits: int = Field(default=10, ge=5, le=200, description="an integer from 5 to 200")
+    seed: int = Field(default=1, ge=0, lt=2**63, description="an integer from 0 to 2^63 - 1")
+    arithmetic: Literal["balls", "mpmath"] = Field(
+        default="balls", description='"balls" or "mpmath"'
+    )
+
+    @model_validator(mode="before")
+    @classmethod
+    def _accept_integers(cls, data: object) -> object:
+        if isinstance(data, Mapping) and "fraction" in data:
+            return {**data, "fraction": _exact_number(data["fraction"])}
+        return data
+
+    @property
+    def share(self) -> Decimal:
+        """The fraction as a number: 1 for "all", 0 for "none"."""
+        if isinstance(self.fraction, Decimal):
+            return self.fraction
+        return Decimal(1 if self.fraction == "all" else 0)
+
+
+class OutputConfig(_Section):
+    """`[output]`: where the tables go, and how they look."""
+
+    directory: FilePath = Field(description="the path of a directory for this run")
+    layout: Literal["long", "wide"] = Field(default="long", description='"long" or "wide"')
+    formats: tuple[Literal["parquet", "csv"], ...] = Field(
+        default=("parquet",),
+        strict=False,
+        min_length=1,
+        description='an array of "parquet", "csv" or both',
+    )
+
+
+class ExecutionConfig(_Section):
+    """`[execution]`: how the work is spread; never changes a result."""
+
+    engine: Literal["local"] = Field(default="local", description="local")
+    workers: int | None = Field(
+        default=None,
+        ge=1,
+        le=1024,
+        description="an integer from 1 to 1024 (left out: the usable cores)",
+    )
+    chunk_rows: int = Field(
+        default=1000, ge=1, le=1_000_000, description="an integer from 1 to 1000000"
+    )
+
+
+class RunConfig(_Section):
+    """A whole config, valid in itself; the columns it names are checked against the points."""
+
+    title: str = Field(default="", description="a line of text")
+    points: PointsConfig = Field(description="a section [points]")
+    integrals: tuple[IntegralConfig, ...] = Field(
+        alias="integral",
+        strict=False,
+        min_length=1,
+        description="one or more sections [[integral]]",
+    )
+    conventions: ConventionsConfig = Field(
+        default=ConventionsConfig(), description="a section [conventions]"
+    )
+    accuracy: AccuracyConfig = Field(default=AccuracyConfig(), description="a section [accuracy]")
+    cross_check: CrossCheckConfig = Field(
+        default=CrossCheckConfig(), description="a section [cross_check]"
+    )
+    output: OutputConfig = Field(description="a section [output]")
+    execution: ExecutionConfig = Field(
+        default=ExecutionConfig(), description="a section [execution]"
+    )
+
+    _file: Path | None = PrivateAttr(None)
+
+    @model_validator(mode="after")
+    def _check_names(self) -> Self:
+        names = [integral.name for integral in self.integrals]
+        for name in names:
+            if names.count(name) > 1:
+                raise InputError(
+                    f'[[integral]] name = "{name}" is given {names.count(name)} times; '
+                    "accepted: a different name for each integral"
+                )
+        return self
+
+    @property
+    def where(self) -> str:
+        """The start of a message about this config: its file and a colon, if it has one."""
+        return f"{self._file}: " if self._file else ""
+
+
+def load_config(path: Path) -> RunConfig:
+    """Read and check a config file.
+
+    The path of the points is relative to the current directory or, if nothing is there, to the
+    directory of the config.
+
+    Raises
+    ------
+    ConfigError
+        If the file cannot be read, is not TOML, or has an unknown key or an unusable value.
+    """
+    raw = _read_toml(path)
+    try:
+        config = RunConfig.model_validate(raw)
+    except ValidationError as error:
+        raise ConfigError(f"{path}: {_sentence(error, raw)}") from None
+    beside = path.parent / config.points.file
+    if not config.points.file.exists() and beside.exists():
+        points = config.points.model_copy(update={"file": beside})
+        config = config.model_copy(update={"points": points})
+    config._file = path  # set once, by the only function that knows it
+    return config
+
+
+def config_as_dict(config: RunConfig) -> dict[str, Any]:
+    """Return the config as JSON-able data with every default filled in.
+
+    Expressions, decimals and paths are strings; keys that were not given and have no default are
+    left out.  Equal configs give equal data.
+    """
+    plain: dict[str, Any] = _jsonable(config)
+    return plain
+
+
+def _jsonable(value: object) -> Any:  # noqa: ANN401 - JSON
+    match value:
+        case BaseModel():
+            fields = type(value).model_fields
+            found = {field.alias or name: getattr(value, name) for name, field in fields.items()}
+            return {key: _jsonable(item) for key, item in found.items() if item is not None}
+        case Expression():
+            return value.text
+        case Decimal():
+            return format(value.normalize(), "f") if value else "0"
+        case Path():
+            return value.as_posix()
+        case tuple():
+            return [_jsonable(item) for item in value]
+        case str():
+            return str(value)  # also turns the enumerations into plain strings
+        case _:
+            return value
+
+
+def _read_toml(path: Path) -> dict[str, Any]:
+    accepted = "accepted: a TOML file"
+    try:
+        text = path.read_bytes().decode("utf-8-sig")
+    except FileNotFoundError:
+        raise ConfigError(f"{path} does not exist; {accepted}") from None
+    except IsADirectoryError:
+        raise ConfigError(f"{path} is a directory; {accepted}") from None
+    except UnicodeDecodeError:
+        raise ConfigError(f"{path} is not text in UTF-8; {accepted}") from None
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or error
+        raise ConfigError(f"{path} cannot be read: {reason}; {accepted}") from None
+    try:
+        return tomllib.loads(text, parse_float=Decimal)
+    except InvalidOperation:
+        raise ConfigError(
+            f"{path} has a number whose exponent is too large; accepted: up to 10^10000"
+        ) from None
+    except (ValueError, RecursionError) as error:
+        reason = str(error).partition(";")[0]
+        raise ConfigError(f"{path} is not valid TOML: {reason}; {accepted}") from None
+
+
+def _sentence(error: ValidationError, raw: Mapping[str, Any]) -> str:
+    """Turn the most telling of pydantic's errors into one plain sentence."""
+    errors = error.errors(include_url=False)
+    # a misspelt key explains why the right one is missing
+    first = min(errors, key=lambda found: found["type"] != "extra_forbidden")
+    model: type[_Section] = RunConfig
+    where, data, loc = "", raw, first["loc"]
+    if loc and loc[0] in _SECTIONS:
+        section, loc = str(loc[0]), loc[1:]
+        if not loc:
+            return _section_sentence(section, first["type"], raw)
+        model, where, data = _SECTIONS[section], f"[{section}] ", raw[section]
+        if isinstance(loc[0], int):
+            data, loc = raw[section][loc[0]], loc[1:]
+            where = _integral_label(raw[section], data)
+    message = str(first["ctx"]["error"]) if first["type"] == "value_error" else ""
+    if not loc:
+        return f"{where}{message}" if message else f"{where}= {_toml(data)}; {_keys('integral')}"
+    key = str(loc[0])
+    fields = {field.alias or name: field for name, field in model.model_fields.items()}
+    if first["type"] == "extra_forbidden":
+        return f"{where}{key} {unknown_name(key, fields)}"
+    accepted = f"accepted: {fields[key].description}"
+    if first["type"] == "missing":
+        return f"{where}{key} is missing; {accepted}"
+    if message:
+        return f"{where}{key}: {message}"
+    return f"{where}{key} = {_toml(data[key])}; {accepted}"
+
+
+def _section_sentence(section: str, kind: str, raw: Mapping[str, Any]) -> str:
+    """Explain what is wrong with a section as a whole."""
+    brackets = _brackets(section)
+    accepted = _keys(section)
+    if kind == "missing" or raw.get(section) == []:
+        return f"{brackets} is missing; {accepted}"
+    if isinstance(raw.get(section), Mapping):
+        return f"[{section}] is written with single brackets; {accepted}"
+    return f"{section} = {_toml(raw.get(section))} is not a section; {accepted}"
+
+
+def _brackets(section: str) -> str:
+    return "[[integral]]" if section == "integral" else f"[{section}]"
+
+
+def _keys(section: str) -> str:
+    fields = _SECTIONS[section].model_fields
+    return f"accepted: {_brackets(section)} with the keys {', '.join(fields)}"
+
+
+def _integral_label(entries: list[Any], entry: object) -> str:
+    name = entry.get("name") if isinstance(entry, Mapping) else None
+    if isinstance(name, str):
+        return f"[[integral]] {_toml(name)} "
+    place = next(index for index, other in enumerate(entries) if other is entry)
+    return f"[[integral]] number {place + 1} "
+
+
+_SECTIONS: dict[str, type[_Section]] = {
+    "points": PointsConfig,
+    "integral": IntegralConfig,
+    "conventions": ConventionsConfig,
+    "accuracy": AccuracyConfig,
+    "cross_check": CrossCheckConfig,
+    "output": OutputConfig,
+    "execution": ExecutionConfig,
+}
+
+
+def _plain(value: object) -> object:
+    """Return TOML data with floats in place of decimals, for messages that show the value."""
+    if isinstance(value, list):
+        return [_plain(item) for item in value]
+    return float(value) if isinstance(value, Decimal) else value
+
+
+def _toml(value: object) -> str:
+    """Return a value as it would be written in TOML, shortened."""
+    text: str
+    if isinstance(value, list | tuple):
+        text = f"[{', '.join(_toml(item) for item in value)}]"
+    elif isinstance(value, Mapping):
+        text = "{...}"
+    elif isinstance(value, str):
+        text = json.dumps(value, ensure_ascii=False)
+    elif isinstance(value, bool):
+        text = "true" if value else "false"
+    else:
+        text = str(value)
+    return text if len(text) <= 60 else text[:57] + "..."

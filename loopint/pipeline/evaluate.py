@@ -1,0 +1,113 @@
+"""One row of the points: every integral of the plan, or the reason why the row is rejected."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+from loopint.core.errors import InputError, LoopintError, MorePrecisionNeeded
+from loopint.core.numbers import imaginary_part, real_part, rounds_uniquely
+from loopint.integrals import registry
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from loopint.core.laurent import BallSeries
+    from loopint.integrals.proof import Evaluation
+    from loopint.pipeline.plan import Cells, IntegralPlan, RowRequest
+
+
+@dataclass(frozen=True, slots=True)
+class Computed:
+    """One integral of one row: what was asked, and the proven answer."""
+
+    request: RowRequest
+    evaluation: Evaluation
+
+    @property
+    def name(self) -> str:
+        """The name of the integral in the config."""
+        return self.request.name
+
+
+class RowRejectedError(LoopintError):
+    """A row that cannot be evaluated; `integral` is the name of the integral that failed."""
+
+    def __init__(self, integral: str, reason: str) -> None:
+        super().__init__(reason)
+        self.integral = integral
+        self.reason = reason
+
+
+def rounds_to_floats(series: BallSeries, orders: tuple[int, int]) -> bool:
+    """Whether real and imaginary part of every order have one nearest float64."""
+    return all(
+        rounds_uniquely(real_part(series[k])) and rounds_uniquely(imaginary_part(series[k]))
+        for k in range(orders[0], orders[1] + 1)
+    )
+
+
+def row_requests(plans: Sequence[IntegralPlan], cells: Cells) -> list[RowRequest]:
+    """Return point and conventions of every integral of a row.
+
+    Raises
+    ------
+    RowRejectedError
+        If a cell or the kinematics of one of them cannot be used.
+    """
+    requests = []
+    for plan in plans:
+        try:
+            requests.append(plan.request(cells))
+        except InputError as error:
+            raise RowRejectedError(plan.name, str(error)) from None
+    return requests
+
+
+def evaluate_row(
+    plans: Sequence[IntegralPlan], cells: Cells, *, digits: int, max_precision_bits: int
+) -> list[Computed]:
+    """Evaluate every integral of a row.
+
+    Parameters
+    ----------
+    plans
+        The integrals.
+    cells
+        Exact value, or the error, of every cell the plans use.
+    digits, max_precision_bits
+        See `loopint.integrals.registry.evaluate`; on top of the digits the coefficients are proven
+        far enough to have one nearest float64.
+
+    Raises
+    ------
+    RowRejectedError
+        If one of the integrals cannot be evaluated: the row is then rejected as a whole.
+    """
+    return [
+        Computed(request, _evaluate(request, digits, max_precision_bits))
+        for request in row_requests(plans, cells)
+    ]
+
+
+def _evaluate(request: RowRequest, digits: int, max_precision_bits: int) -> Evaluation:
+    orders = request.integral.orders
+    try:
+        return registry.evaluate(
+            request.integral,
+            request.point,
+            request.conventions,
+            digits=digits,
+            max_precision_bits=max_precision_bits,
+            accept=lambda series: rounds_to_floats(series, orders),
+        )
+    except LoopintError as error:
+        reason = str(error)
+    except MorePrecisionNeeded:
+        reason = f"undecided at max_precision_bits = {max_precision_bits}; accepted: a larger cap"
+    except (
+        ArithmeticError, AssertionError, LookupError, RuntimeError, TypeError, ValueError,
+    ) as error:  # fmt: skip
+        # One row must not end a run of millions, and must not be lost either.
+        reason = f"unexpected {type(error).__name__}: {error} (a defect; please report it)"
+    raise RowRejectedError(request.name, reason)

@@ -1,0 +1,105 @@
+"""What a run was: plan hash, manifest, and the metadata that go into every table."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import platform
+from copy import deepcopy
+from importlib import metadata
+from typing import TYPE_CHECKING, Any
+
+from loopint.pipeline.config import config_as_dict
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping, Sequence
+
+    from loopint.pipeline.config import RunConfig
+    from loopint.pipeline.run_directory import ChunkRecord
+
+# Where files come from and go to, and who does the work, does not change any number.
+WITHOUT_EFFECT = {
+    "points": ("file",),
+    "output": ("directory", "formats"),
+    "execution": ("engine", "workers"),
+}
+
+
+def package_version() -> str:
+    """Return the version of the installed package."""
+    try:
+        return metadata.version("loopint")
+    except metadata.PackageNotFoundError:
+        return "unknown"
+
+
+def plan_hash(config: RunConfig, input_hashes: Mapping[str, str]) -> str:
+    """Return the SHA-256 of everything that determines the results of a run.
+
+    These are the config without title, paths, formats and workers, the contents of the input files
+    in their order, and the version of the package.
+    """
+    relevant = deepcopy(config_as_dict(config))
+    relevant.pop("title", None)
+    for section, names in WITHOUT_EFFECT.items():
+        for name in names:
+            relevant.get(section, {}).pop(name, None)
+    content = {
+        "version": package_version(),
+        "inputs": list(input_hashes.values()),
+        "config": relevant,
+    }
+    return hashlib.sha256(json.dumps(content, sort_keys=True).encode()).hexdigest()
+
+
+def versions() -> dict[str, str]:
+    """Return the versions of the package and of what its numbers rest on."""
+    import flint  # noqa: PLC0415 - only for its version
+
+    found = {"loopint": package_version(), "python": platform.python_version()}
+    found["FLINT"] = str(flint.__FLINT_VERSION__)
+    for name in ("python-flint", "mpmath", "pyarrow"):
+        found[name] = metadata.version(name)
+    return found
+
+
+def table_metadata(config: RunConfig) -> dict[str, Any]:
+    """Return what a table says about itself, apart from its columns."""
+    content = config_as_dict(config)
+    return {
+        "version": package_version(),
+        "dimension_convention": "d = dimension - 2 eps",
+        "conventions": content["conventions"],
+        "accuracy": content["accuracy"],
+        "integral": content["integral"],
+    }
+
+
+def manifest_content(
+    config: RunConfig,
+    plan: str,
+    input_hashes: Mapping[str, str],
+    records: Sequence[ChunkRecord] | None = None,
+) -> dict[str, Any]:
+    """Return the content of `manifest.json`; without records, for a run that has just begun."""
+    content = config_as_dict(config)
+    result: dict[str, Any] = {
+        "title": content.get("title"),
+        "state": "running" if records is None else "finished",
+        "plan_hash": plan,
+        "versions": versions(),
+        "conventions": content["conventions"],
+        "inputs": dict(input_hashes),
+        "config": content,
+    }
+    if records is not None:
+        result["table"] = [
+            {
+                "file": f"table/part-{record.index:05d}.parquet",
+                "sha256": record.table_sha256,
+                "source_rows": record.rows,
+                "lines": record.table_lines,
+            }
+            for record in records
+        ]
+    return result
