@@ -1,6 +1,6 @@
 """One-loop scalar integrals over many kinematic points, every number with a proven error bound."""
 
-from loopint.api import bubble, tadpole
+from loopint.api import bubble, formula, propagator, tadpole
 from loopint.core.errors import (
     InputError,
     LoopintError,
@@ -9,6 +9,7 @@ from loopint.core.errors import (
     UnsupportedIntegralError,
 )
 from loopint.core.laurent import LaurentSeries
+from loopint.integrals.reduction import Reduction, reduce_bubble
 
 __version__ = "0.1.0"
 
@@ -17,9 +18,13 @@ __all__ = [
     "LaurentSeries",
     "LoopintError",
     "LostOrderError",
+    "Reduction",
     "UnregulatedError",
     "UnsupportedIntegralError",
     "__version__",
     "bubble",
+    "formula",
+    "propagator",
+    "reduce_bubble",
     "tadpole",
 ]

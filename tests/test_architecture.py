@@ -14,9 +14,9 @@ MAY_IMPORT = {  # rooms of the mathematics floor, from the bottom up
     "core": {"core"},
     "hypergeometric": {"core", "hypergeometric"},
     "quadrature": {"core", "quadrature"},
-    "integrals": {"core", "hypergeometric", "integrals"},
+    "integrals": {"core", "hypergeometric", "quadrature", "integrals"},
     "arrays": {"core", "hypergeometric", "integrals", "arrays"},
-    "formulas": {"core", "hypergeometric", "integrals", "formulas"},
+    "formulas": {"core", "hypergeometric", "quadrature", "integrals", "formulas"},
     "pipeline": MATHEMATICS | {"pipeline"},
     "interpolation": MATHEMATICS | PIPELINE,
 }

@@ -31,7 +31,7 @@ class RationalFunction:
     @property
     def is_zero(self) -> bool:
         """Whether the function vanishes identically."""
-        return bool(self.numerator == 0)
+        return self.numerator.is_zero()
 
     def __add__(self, other: RationalFunction | int) -> RationalFunction:
         if isinstance(other, int):

@@ -56,16 +56,14 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 import flint
-from flint import acb, arb, arb_poly, arb_series, fmpq
+from flint import arb, arb_series, fmpq
 
-from loopint.core.errors import MorePrecisionNeeded
 from loopint.core.gamma_factors import EpsilonFactor
-from loopint.core.laurent import BallSeries
-from loopint.core.numbers import Ball, real_part
+from loopint.core.numbers import real_part
 from loopint.core.precision import series_length, working_precision
+from loopint.hypergeometric.tables import EpsilonTable
 
 LARGEST_RADIUS = 17 / 16  # just above pi/3
-SHORTEST_RADIUS_EXPONENT = 40  # below 2^-40 of it the polynomials no longer get shorter by much
 CAUCHY_RADII = (2.0, 2.5, 3.0, 3.5, 4.0, 4.5, 5.0, 5.5)
 
 
@@ -91,92 +89,10 @@ class GaussParameters:
         return result
 
 
-class GaussTable:
-    """The product of an exact prefactor and 2F1(1, b; c; w), expanded in epsilon.
-
-    Evaluation is a set of polynomials in u = -log(1-w), truncated according to |u|.  Obtain
-    tables from `gauss_table`, which shares them between points.
-    """
-
-    def __init__(
-        self, lowest: int, orders: list[list[arb]], remainders: list[list[arb]], bits: int
-    ) -> None:
-        self.lowest = lowest
-        self._orders = orders
-        self._remainders = remainders
-        self._bits = bits
-        self._cut: dict[int, list[tuple[arb_poly, arb]]] = {}
-
-    def evaluate(self, u: Ball) -> BallSeries:
-        """Enclose every epsilon coefficient at u = -log(1-w), |u| <= 17/16.
-
-        Raises
-        ------
-        MorePrecisionNeeded
-            If the ball u is not known to lie in |u| <= 17/16.
-        """
-        size = float(abs(u).upper()) if isinstance(u, arb) else float(u.abs_upper())
-        if not size <= LARGEST_RADIUS:
-            raise MorePrecisionNeeded
-        exponent = 0
-        if size < LARGEST_RADIUS / 2:
-            exponent = SHORTEST_RADIUS_EXPONENT
-            if size > 0:
-                exponent = min(exponent, -math.frexp(size / LARGEST_RADIUS)[1])
-        pieces = self._cut.get(exponent)
-        if pieces is None:
-            pieces = self._cut[exponent] = self._truncate(exponent)
-        real = isinstance(u, arb)
-        return BallSeries(
-            self.lowest,
-            [polynomial(u) + (tail if real else acb(tail, tail)) for polynomial, tail in pieces],
-        )
-
-    def _truncate(self, exponent: int) -> list[tuple[arb_poly, arb]]:
-        """Cut polynomials for |u| <= (17/16) 2^-exponent with tails below 2^-bits."""
-        with working_precision(64):
-            radius = arb(LARGEST_RADIUS) * arb(2) ** -exponent
-            goal = arb(2) ** -self._bits
-            terms = max(self._terms_needed(k, radius, goal) for k in range(len(self._orders)))
-            tails = [self._tail(k, radius, terms) for k in range(len(self._orders))]
-        with working_precision(self._bits + 32):
-            return [
-                (arb_poly(coefficients[:terms]), arb(0, tail) if tail != 0 else arb(0))
-                for coefficients, tail in zip(self._orders, tails, strict=True)
-            ]
-
-    def _tail(self, k: int, radius: arb, terms: int) -> arb:
-        """Bound sum_{n >= terms} |a_n| radius^n."""
-        coefficients = self._orders[k]
-        length = len(coefficients)
-        total = arb(0)
-        for n in range(length - 1, terms - 1, -1):
-            total = total * radius + coefficients[n].abs_upper()
-        total = total * radius**terms
-        if all(bound == 0 for bound in self._remainders[k]):
-            return total.upper()
-        beyond = [
-            bound * (radius / cauchy) ** length / (1 - radius / cauchy)
-            for cauchy, bound in zip(CAUCHY_RADII, self._remainders[k], strict=True)
-        ]
-        return (total + min(beyond, key=lambda b: float(b.log().mid()))).upper()
-
-    def _terms_needed(self, k: int, radius: arb, goal: arb) -> int:
-        """Return the smallest number of terms whose tail bound is below the goal."""
-        low, high = 1, len(self._orders[k])
-        while low < high:
-            middle = (low + high) // 2
-            if self._tail(k, radius, middle) <= goal:
-                high = middle
-            else:
-                low = middle + 1
-        return low
-
-
 @lru_cache(maxsize=256)
 def gauss_table(
     parameters: GaussParameters, prefactor: EpsilonFactor, highest: int, bits: int
-) -> GaussTable:
+) -> EpsilonTable:
     """Return the table of prefactor * 2F1(1, b; c; w) through order eps^highest.
 
     The truncation error of every coefficient is below 2^-bits at any |u| <= 17/16, and is included
@@ -202,7 +118,19 @@ def gauss_table(
         shape = _times_factor(_expand(high, terms), weights[-1])
         orders = [total + power * new for total, new in zip(orders, shape, strict=True)]
         columns = [_coefficients(series, length) for series in orders]
-    return GaussTable(lowest, columns, remainders, bits)
+
+    def remainder(k: int, radius: arb) -> arb:
+        if all(bound == 0 for bound in remainders[k]):
+            return arb(0)
+        return min(
+            (
+                bound * (radius / cauchy) ** length / (1 - radius / cauchy)
+                for cauchy, bound in zip(CAUCHY_RADII, remainders[k], strict=True)
+            ),
+            key=lambda bound: float(bound.log().mid()),
+        )
+
+    return EpsilonTable(lowest, columns, remainder, LARGEST_RADIUS, bits)
 
 
 def _coefficients_from(factor: EpsilonFactor, lowest: int, terms: int) -> list[arb]:

@@ -16,6 +16,7 @@ from math import factorial
 from flint import arb, fmpq
 
 from loopint.core.conventions import Measure
+from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.core.errors import UnsupportedIntegralError
 from loopint.core.gamma_factors import EpsilonFactor
 from loopint.core.kinematics import Region, TwoPoint
@@ -23,8 +24,7 @@ from loopint.core.laurent import BallSeries
 from loopint.core.numbers import Ball, ExactComplex
 from loopint.core.precision import current_bits
 from loopint.integrals.moments import FeynmanMoment, ultraviolet_moment
-from loopint.integrals.numerators import tadpole_ratio
-from loopint.integrals.powers import times_mass_power
+from loopint.integrals.numerators import numerator_series
 
 MAX_POWER = 12
 ISOLATED = "_isolated"
@@ -83,10 +83,10 @@ def series(
     n1, n2 = powers
     if _vanishes(point, n1, n2):
         return BallSeries.zero(highest)
-    if n1 <= 0:
-        return _numerator(point.exchanged(), n2, -n1, dimension, highest, measure)
-    if n2 <= 0:
-        return _numerator(point, n1, -n2, dimension, highest, measure)
+    if n1 <= 0 or n2 <= 0:
+        ordered = point.exchanged() if n1 <= 0 else point
+        power = EpsilonLinear.of(max(n1, n2), 0)
+        return numerator_series(ordered, power, -min(n1, n2), dimension, highest, measure)
     bits = current_bits()
     moment = _moment(n1, n2, dimension, measure, highest, bits)
     result = moment.integrate(point)
@@ -177,19 +177,3 @@ def _infrared_residue_vanishes(
         term = (term * z).scaled(ratio)
         value = value + term
     return value.is_zero
-
-
-def _numerator(
-    point: TwoPoint, power: int, numerator: int, dimension: int, highest: int, measure: Measure
-) -> BallSeries:
-    """Expand measure * B(power, -numerator); the massive line is the first."""
-    factor = measure.factor(dimension) * EpsilonFactor.gamma(1 - fmpq(dimension, 2), 1)
-    terms = highest - factor.lowest_order + 1
-    if terms <= 0:
-        return BallSeries.zero(highest)
-    ratio = tadpole_ratio(
-        point.p_squared, point.m1_squared, point.m2_squared, power, numerator, dimension, terms
-    )
-    exact = BallSeries(0, [c.ball() for c in ratio])
-    tadpole = times_mass_power(point.m1_squared, factor.series(terms), fmpq(dimension, 2) - 1)
-    return tadpole * exact

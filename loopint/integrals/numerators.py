@@ -1,6 +1,6 @@
-"""Bubbles in which one power is zero or negative: tadpoles with a numerator.
+"""Two-point integrals in which the power of one line is an integer <= 0: tadpoles with a numerator.
 
-With euclidean sign, D1 = m1^2 - q^2, and j = -n2 >= 0,
+With euclidean sign, D1 = m1^2 - q^2, j = -n2 >= 0 and any power nu of the first line,
 
     m2^2 - (q+p)^2 = X + D1 - 2 q.p,        X = m2^2 - m1^2 - p^2,
 
@@ -8,8 +8,12 @@ whose j-th power is expanded; odd powers of q.p integrate to zero, and even ones
 
     (2 q.p)^(2b) -> (4 p^2 q^2)^b (1/2)_b/(d/2)_b,        q^2 = m1^2 - D1.
 
-Everything becomes tadpoles A(n) = A(1) (1-d/2)_(n-1)/(n-1)! (m1^2)^(1-n), so the sum is A(1) times
-a rational function of eps with exact coefficients: what cancels, cancels exactly.
+Everything becomes tadpoles A(nu-k), 0 <= k <= j, and with i = j - k and mu = nu - j
+
+    A(nu-k) = Gamma(mu-d/2)/Gamma(nu) (mu-d/2)_i (mu+i)_(j-i) (m1^2)^(d/2-mu-i),
+
+so the sum is one Gamma prefactor times a power series in eps with exact coefficients: what cancels,
+cancels exactly, and tadpoles with a power <= 0 drop out by themselves.
 """
 
 from __future__ import annotations
@@ -18,49 +22,79 @@ from math import comb, factorial
 
 from flint import fmpq
 
+from loopint.core.conventions import Measure
+from loopint.core.epsilon_linear import EpsilonLinear, gamma_ratio
+from loopint.core.kinematics import TwoPoint
+from loopint.core.laurent import BallSeries
 from loopint.core.numbers import ExactComplex
+from loopint.integrals.powers import times_mass_exponent
 
-EpsilonSeries = list[ExactComplex]
 ZERO = ExactComplex(fmpq(0))
 
 
-def tadpole_ratio(
-    p_squared: fmpq,
-    m1_squared: ExactComplex,
-    m2_squared: ExactComplex,
-    power: int,
+def numerator_series(
+    point: TwoPoint,
+    power: EpsilonLinear,
     numerator: int,
     dimension: int,
-    terms: int,
-) -> EpsilonSeries:
-    """Return B(power, -numerator)/A(1) as the first `terms` exact coefficients in eps.
+    highest: int,
+    measure: Measure,
+) -> BallSeries:
+    """Expand measure * B(power, -numerator) through order `highest`.
 
     Parameters
     ----------
+    point
+        The line with the power comes first; its mass is not zero.
     power
-        n1 >= 1.
+        nu, an integer plus a multiple of eps.
     numerator
-        j = -n2 >= 0.
-    m1_squared
-        Nonzero.
+        j >= 0.
+
+    Raises
+    ------
+    UnregulatedError
+        If the tadpoles have a pole at every eps.
     """
-    x = m2_squared - m1_squared - ExactComplex(p_squared)
-    total: EpsilonSeries = [ZERO] * terms
-    for b in range(numerator // 2 + 1):
+    half = EpsilonLinear.of(fmpq(dimension, 2), -1)
+    lowest_power = power - numerator
+    ratio = gamma_ratio((lowest_power - half,), (power,))
+    if ratio is None:  # a power <= 0 on both lines
+        return BallSeries.zero(highest)
+    factor = measure.factor(dimension) * ratio
+    terms = highest - factor.lowest_order + 1
+    if terms <= 0:
+        return BallSeries.zero(highest)
+    exact = _sum_of_tadpoles(point, power, numerator, dimension, terms)
+    series = factor.series(terms) * BallSeries(0, [c.ball() for c in exact])
+    return times_mass_exponent(point.m1_squared, series, half - power)
+
+
+def _sum_of_tadpoles(
+    point: TwoPoint, power: EpsilonLinear, j: int, dimension: int, terms: int
+) -> list[ExactComplex]:
+    """Return the exact coefficients beside Gamma(mu-d/2)/Gamma(nu) (m1^2)^(d/2-nu)."""
+    m1, m2 = point.m1_squared, point.m2_squared
+    x = m2 - m1 - ExactComplex(point.p_squared)
+    lowest_power = power - j
+    over_half = lowest_power - EpsilonLinear.of(fmpq(dimension, 2), -1)
+    tadpoles = [
+        _product(_rising(over_half, i, terms), _rising(lowest_power + i, j - i, terms))
+        for i in range(j + 1)
+    ]
+    total = [ZERO] * terms
+    for b in range(j // 2 + 1):
         average = _average(b, dimension, terms)
-        for a in range(numerator - 2 * b + 1):
-            i = numerator - 2 * b - a
-            multinomial = factorial(numerator) // (factorial(i) * factorial(a) * factorial(2 * b))
-            outer = _power(x, i).scaled(fmpq(multinomial) * (4 * p_squared) ** b)
+        for a in range(j - 2 * b + 1):
+            rest = j - 2 * b - a
+            multinomial = factorial(j) // (factorial(rest) * factorial(a) * factorial(2 * b))
+            outer = _power(x, rest).scaled(fmpq(multinomial) * (4 * point.p_squared) ** b)
             if outer.is_zero:
                 continue
             for c in range(b + 1):
-                n = power - a - c
-                if n <= 0:
-                    continue
-                weight = outer * _power(m1_squared, b - c).scaled(fmpq((-1) ** c * comb(b, c)))
-                weight = weight / _power(m1_squared, n - 1)
-                series = _product(average, _pochhammer(n - 1, dimension, terms))
+                i = j - a - c
+                weight = outer * _power(m1, b - c + j - i).scaled(fmpq((-1) ** c * comb(b, c)))
+                series = _product(average, tadpoles[i])
                 total = [t + weight.scaled(r) for t, r in zip(total, series, strict=True)]
     return total
 
@@ -75,12 +109,15 @@ def _average(b: int, dimension: int, terms: int) -> list[fmpq]:
     return result
 
 
-def _pochhammer(n: int, dimension: int, terms: int) -> list[fmpq]:
-    """Expand (1 - d/2)_n / n! in eps."""
-    result = [fmpq(1, factorial(n))] + [fmpq(0)] * (terms - 1)
+def _rising(start: EpsilonLinear, n: int, terms: int) -> list[fmpq]:
+    """Expand the Pochhammer symbol (start)_n in eps."""
+    result = [fmpq(1)] + [fmpq(0)] * (terms - 1)
     for j in range(n):
-        constant = 1 - fmpq(dimension, 2) + j  # constant + eps
-        result = [result[k] * constant + (result[k - 1] if k else fmpq(0)) for k in range(terms)]
+        constant = start.constant + j
+        result = [
+            result[k] * constant + (result[k - 1] * start.rate if k else fmpq(0))
+            for k in range(terms)
+        ]
     return result
 
 

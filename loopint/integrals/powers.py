@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from flint import arb, fmpq
 
+from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.core.laurent import BallSeries, exponential
 from loopint.core.numbers import Ball, ExactComplex
 
@@ -26,12 +27,19 @@ def times_exponential(value: BallSeries, rate: Ball) -> BallSeries:
 
 def times_mass_power(m_squared: ExactComplex, value: BallSeries, s0: fmpq) -> BallSeries:
     """Return value * (m^2)^(s0 - eps)."""
-    power, logarithm = mass_power(m_squared, s0)
-    result = times_exponential(value, -logarithm)
-    return result if s0 == 0 else result.scaled(power)
+    return times_mass_exponent(m_squared, value, EpsilonLinear(s0, fmpq(-1)))
 
 
-def times_linear(value: BallSeries, constant: fmpq, rate: int) -> BallSeries:
+def times_mass_exponent(
+    m_squared: ExactComplex, value: BallSeries, exponent: EpsilonLinear
+) -> BallSeries:
+    """Return value * (m^2)^(constant + rate eps)."""
+    power, logarithm = mass_power(m_squared, exponent.constant)
+    result = times_exponential(value, exponent.rate * logarithm) if exponent.rate != 0 else value
+    return result if exponent.constant == 0 else result.scaled(power)
+
+
+def times_linear(value: BallSeries, constant: fmpq, rate: fmpq | int) -> BallSeries:
     """Return value * (constant + rate eps), an exact polynomial: no order is lost."""
     c = value.coefficients
     first = [c[0] * constant]

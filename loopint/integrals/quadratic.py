@@ -51,7 +51,8 @@ from loopint.core.kinematics import Region, TwoPoint, logarithm_below_cut
 from loopint.core.laurent import BallSeries
 from loopint.core.numbers import Ball, ExactComplex, real_part
 from loopint.core.precision import working_precision
-from loopint.hypergeometric.unit_gauss import GaussParameters, GaussTable, gauss_table
+from loopint.hypergeometric.tables import EpsilonTable
+from loopint.hypergeometric.unit_gauss import GaussParameters, gauss_table
 from loopint.integrals.powers import times_exponential, times_mass_power
 
 HALF = arb(0.5)
@@ -72,8 +73,8 @@ class QuadraticTables:
     """
 
     s0: fmpq
-    far: GaussTable
-    near: GaussTable
+    far: EpsilonTable
+    near: EpsilonTable
     singular: BallSeries
     between_roots: BallSeries
 

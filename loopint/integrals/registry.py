@@ -3,22 +3,32 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, TypeAlias
+from typing import TYPE_CHECKING, Any, TypeAlias
 
-from flint import arb, fmpq
+from flint import acb, arb, fmpq
 
-from loopint.core.conventions import Conventions
+from loopint.core.conventions import Conventions, PropagatorSign
+from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.core.errors import InputError
 from loopint.core.kinematics import OnePoint, TwoPoint
 from loopint.core.laurent import BallSeries, check_orders
-from loopint.integrals import bubble, tadpole
+from loopint.core.numbers import Ball, exact_real
+from loopint.integrals import bubble, propagator, tadpole
+from loopint.integrals.derivatives import (
+    ONE_POINT_VARIABLES,
+    TWO_POINT_VARIABLES,
+    DerivativeTerm,
+    check_derivatives,
+    derivative_term,
+)
+from loopint.integrals.powers import times_exponential, times_linear
 from loopint.integrals.proof import DEFAULT_MAX_PRECISION_BITS, Evaluation, check_digits, prove
 
 if TYPE_CHECKING:
     from collections.abc import Callable
 
 Point: TypeAlias = OnePoint | TwoPoint
-Powers: TypeAlias = tuple[int, ...]
+Powers: TypeAlias = tuple[Any, ...]  # integers, or EpsilonLinear where powers may hold epsilon
 
 
 @dataclass(frozen=True, slots=True)
@@ -31,6 +41,8 @@ class Family:
         What the user writes.
     default_powers
         Powers when none are given; its length is the number of propagators.
+    variables
+        What an integral can be differentiated by.
     check
         `check(powers, dimension)` raises `UnsupportedIntegralError` for what is not covered.
     region
@@ -40,21 +52,51 @@ class Family:
     series
         `series(point, powers, dimension, highest, measure)` is the integral with its measure,
         known at least through order `highest`, at the working precision.
+    epsilon_powers
+        Whether powers may depend on epsilon; the functions then get `EpsilonLinear` numbers.
     """
 
     name: str
     default_powers: Powers
+    variables: tuple[str, ...]
     check: Callable[[Powers, int], None]
     region: Callable[..., str]
     method: Callable[..., str]
     series: Callable[..., BallSeries]
+    epsilon_powers: bool = False
 
 
 FAMILIES: dict[str, Family] = {
     family.name: family
     for family in (
-        Family("tadpole", (1,), tadpole.check, tadpole.region, tadpole.method, tadpole.series),
-        Family("bubble", (1, 1), bubble.check, bubble.region, bubble.method, bubble.series),
+        Family(
+            "tadpole",
+            (1,),
+            ONE_POINT_VARIABLES,
+            tadpole.check,
+            tadpole.region,
+            tadpole.method,
+            tadpole.series,
+        ),
+        Family(
+            "bubble",
+            (1, 1),
+            TWO_POINT_VARIABLES,
+            bubble.check,
+            bubble.region,
+            bubble.method,
+            bubble.series,
+        ),
+        Family(
+            "propagator",
+            (1, 1),
+            TWO_POINT_VARIABLES,
+            propagator.check,
+            propagator.region,
+            propagator.method,
+            propagator.series,
+            epsilon_powers=True,
+        ),
     )
 }
 
@@ -63,25 +105,32 @@ FAMILIES: dict[str, Family] = {
 class Integral:
     """Which integral, in which dimension, to which orders; everything but the point.
 
-    Build it with `Integral.parse`, which checks the arguments.
+    `derivatives` names the variables that it is differentiated by, once for each time.  Build it
+    with `Integral.parse`, which checks the arguments.
     """
 
     family: str
     powers: Powers
     dimension: int
     orders: tuple[int, int]
+    derivatives: tuple[str, ...] = ()
 
     @classmethod
     def parse(
-        cls, family: str, powers: object, dimension: object, orders: tuple[int, int]
+        cls,
+        family: str,
+        powers: object,
+        dimension: object,
+        orders: tuple[int, int],
+        derivatives: object = (),
     ) -> Integral:
-        """Check family, powers, dimension and orders.
+        """Check family, powers, dimension, orders and derivatives.
 
         Raises
         ------
         InputError
             For an unknown family, malformed powers, a dimension that is not an integer from 1 to
-            12, or an order range that is upside down.
+            12, an order range that is upside down, or an unknown variable of a derivative.
         UnsupportedIntegralError
             For powers or a dimension that the family does not cover.
         """
@@ -90,28 +139,45 @@ class Integral:
         found = FAMILIES[family]
         if powers is None:
             powers = found.default_powers
-        if isinstance(powers, int) and not isinstance(powers, bool):
-            powers = (powers,)
-        if (
-            not isinstance(powers, tuple | list)
-            or len(powers) != len(found.default_powers)
-            or any(isinstance(n, bool) or not isinstance(n, int) for n in powers)
-        ):
-            raise InputError(
-                f"powers = {powers!r}; accepted for a {family}: "
-                f"{len(found.default_powers)} integer(s), such as {list(found.default_powers)}"
-            )
+        parsed = _parse_powers(found, powers)
         if isinstance(dimension, bool) or not isinstance(dimension, int):
             raise InputError(f"dimension = {dimension!r}; accepted: an integer from 1 to 12")
         if not 1 <= dimension <= 12:
             raise InputError(f"dimension = {dimension}; accepted: an integer from 1 to 12")
-        found.check(tuple(powers), dimension)
-        return cls(family, tuple(powers), dimension, check_orders(orders))
+        found.check(parsed, dimension)
+        variables = check_derivatives(derivatives, found.variables)
+        return cls(family, parsed, dimension, check_orders(orders), variables)
+
+    @property
+    def term(self) -> DerivativeTerm:
+        """What is evaluated: the integral itself, or the one its derivative is a multiple of."""
+        return derivative_term(self.powers, self.dimension, self.derivatives)
 
     @property
     def mass_dimension(self) -> fmpq:
-        """The power of p^2 that the Laurent coefficients scale with: d0/2 - sum of powers."""
-        return fmpq(self.dimension, 2) - sum(self.powers)
+        """The power of p^2 that the Laurent coefficients scale with.
+
+        It is d0/2 - sum of powers - number of derivatives.
+        """
+        total = sum((_at_zero(n).constant for n in self.powers), start=fmpq(0))
+        return fmpq(self.dimension, 2) - total - len(self.derivatives)
+
+    @property
+    def plain_powers(self) -> tuple[int | tuple[int, str], ...]:
+        """The powers as integers, or as (n, "a") for n + a eps; `parse` takes them back."""
+        return tuple(
+            n
+            if isinstance(n, int)
+            else int(n.constant.p)
+            if n.rate == 0
+            else (int(n.constant.p), str(n.rate))
+            for n in self.powers
+        )
+
+    @property
+    def epsilon_power(self) -> fmpq:
+        """The coefficient of eps in the sum of the powers."""
+        return sum((_at_zero(n).rate for n in self.powers), start=fmpq(0))
 
 
 def evaluate(
@@ -145,23 +211,105 @@ def evaluate(
     lowest, highest = integral.orders
     scale = conventions.mu_squared
     reduced = point if scale == 1 else point.scaled(1 / scale)
-    sign = conventions.propagator_sign.sign(sum(integral.powers))
+    term = integral.term
+    sign = conventions.propagator_sign.sign(sum(int(_at_zero(n).constant.p) for n in term.powers))
     measure = conventions.measure
     dimension = integral.mass_dimension
 
     def compute() -> BallSeries:
-        series = family.series(reduced, integral.powers, integral.dimension, highest, measure)
-        if sign < 0:
-            series = -series
+        if term.coefficient == 0:
+            return BallSeries.zero(highest)
+        series = family.series(reduced, term.powers, term.dimension, highest, measure)
+        for linear in term.linear_factors:
+            series = times_linear(series, linear.constant, linear.rate)
+        factor = sign * term.factor(conventions)
+        if factor != 1:
+            series = series.scaled(factor)
         if scale != 1 and dimension != 0:
             series = series.scaled(_rational_power(scale, dimension))
+        if integral.epsilon_power != 0:
+            series = _times_epsilon_phase(series, integral.epsilon_power, conventions)
         return series
 
     series, bits, proven = prove(compute, (lowest, highest), digits, max_precision_bits, accept)
-    region = family.region(point, integral.powers, integral.dimension)
-    region += "_snapped" if point.snapped else ""
-    method = family.method(reduced, integral.powers, integral.dimension)
+    region, method = _region_and_method(family, integral, point)
     return Evaluation(series, integral.orders, digits, region, method, bits, proven)
+
+
+def _region_and_method(family: Family, integral: Integral, point: Point) -> tuple[str, str]:
+    term = integral.term
+    if term.coefficient == 0:
+        region, method = family.region(point, integral.powers, integral.dimension), "exact"
+    else:
+        region = family.region(point, term.powers, term.dimension)
+        method = family.method(point, term.powers, term.dimension)
+        if term.has_no_limit(point) and not region.endswith(bubble.ISOLATED):
+            region += bubble.ISOLATED
+    return region + ("_snapped" if point.snapped else ""), method
+
+
+def _at_zero(power: int | EpsilonLinear) -> EpsilonLinear:
+    return power if isinstance(power, EpsilonLinear) else EpsilonLinear.of(power, 0)
+
+
+def _times_epsilon_phase(series: BallSeries, rate: fmpq, conventions: Conventions) -> BallSeries:
+    """Multiply by what the part `rate` * eps of the powers adds to sign and scale.
+
+    (-1)^(rate eps) = exp(-i pi rate eps) for minkowski propagators, and (mu^2)^(-rate eps), since
+    mu^2 enters the definition only as (mu^2)^eps.
+    """
+    logarithm: Ball = arb(conventions.mu_squared).log()
+    if conventions.propagator_sign is PropagatorSign.MINKOWSKI:
+        logarithm = acb(logarithm, arb.pi())
+    return times_exponential(series, -rate * logarithm)
+
+
+def _shown(value: object) -> str:
+    """Write a value as in a config, with decimals as they were typed."""
+    if isinstance(value, list | tuple):
+        return f"[{', '.join(map(_shown, value))}]"
+    return repr(value) if isinstance(value, str) else str(value)
+
+
+def _parse_powers(family: Family, powers: object) -> Powers:
+    """Return one power for each propagator.
+
+    Raises
+    ------
+    InputError
+        If the number of powers or a power is wrong.
+    """
+    count = len(family.default_powers)
+    kind = "n or [n, a] for n + a eps" if family.epsilon_powers else "integer(s)"
+    wrong = InputError(
+        f"powers = {_shown(powers)}; accepted for a {family.name}: {count} {kind}, "
+        f"such as {list(family.default_powers)}"
+    )
+    if powers is None:
+        powers = family.default_powers
+    if isinstance(powers, int) and not isinstance(powers, bool):
+        powers = (powers,)
+    if not isinstance(powers, tuple | list) or len(powers) != count:
+        raise wrong
+    result: list[int | EpsilonLinear] = []
+    for power in powers:
+        rate: object = 0
+        entry = power
+        if family.epsilon_powers and isinstance(power, EpsilonLinear):
+            result.append(power)
+            continue
+        if family.epsilon_powers and isinstance(power, tuple | list) and len(power) == 2:
+            entry, rate = power
+        if isinstance(entry, bool) or not isinstance(entry, int):
+            raise wrong
+        if not family.epsilon_powers:
+            result.append(entry)
+            continue
+        try:
+            result.append(EpsilonLinear.of(entry, exact_real(rate)))
+        except InputError:
+            raise wrong from None
+    return tuple(result)
 
 
 def _rational_power(base: fmpq, exponent: fmpq) -> arb:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import json
 import tomllib
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from decimal import Decimal, InvalidOperation
 from functools import cached_property
 from pathlib import Path
@@ -24,6 +24,7 @@ from pydantic_core import CoreSchema, core_schema
 
 from loopint.core.conventions import Measure, PropagatorSign
 from loopint.core.errors import InputError
+from loopint.integrals.derivatives import check_derivatives
 from loopint.integrals.proof import DEFAULT_MAX_PRECISION_BITS, MAX_DIGITS, MIN_DIGITS
 from loopint.integrals.registry import FAMILIES, Integral
 from loopint.pipeline.errors import ConfigError, unknown_name
@@ -140,12 +141,19 @@ class IntegralConfig(_Section):
         description="a letter followed by letters, digits and underscores",
     )
     family: str = Field(description=" or ".join(FAMILIES))
-    powers: tuple[int, ...] = Field(
-        default=(), description="an array of integers, one per propagator"
+    powers: tuple[int | tuple[int, str], ...] = Field(
+        default=(),
+        description="an array of integers, one per propagator; for a propagator also [n, a] for "
+        "n + a eps",
     )
     dimension: int = Field(default=4, description="an integer from 1 to 12")
     orders: tuple[int, int] = Field(
         default=(-1, 0), description="an array [lowest, highest] of integers"
+    )
+    derivatives: tuple[tuple[str, ...], ...] = Field(
+        default=(),
+        description="an array of variables; a higher derivative is an array of its own, as in "
+        '["p_squared", ["p_squared", "m1_squared"]]',
     )
     p_squared: Real = Field(default=None, description=REAL)
     m_squared: Squared = Field(default=None, description=SQUARED)
@@ -161,26 +169,27 @@ class IntegralConfig(_Section):
     @model_validator(mode="before")
     @classmethod
     def _parse_integral(cls, data: object) -> object:
-        """Check family, powers, dimension and orders together, as they depend on one another."""
+        """Check what depends on the family: powers, dimension, orders, derivatives."""
         if not isinstance(data, Mapping) or not isinstance(data.get("family"), str):
             return data
         if set(data) - set(cls.model_fields):
             return data  # the unknown key is the better message
-        given = {key: _plain(data.get(key)) for key in ("powers", "dimension", "orders")}
+        given = {key: _plain(data.get(key)) for key in ("dimension", "orders")}
         orders = given["orders"] if "orders" in data else (-1, 0)
         if not isinstance(orders, list | tuple):
             raise InputError(f"orders = {_toml(orders)}; accepted: [lowest, highest], as [-1, 2]")
         integral = Integral.parse(
             data["family"],
-            given["powers"],
+            data.get("powers"),
             given["dimension"] if "dimension" in data else 4,
             cast("tuple[int, int]", orders),  # checked there
         )
         return {
             **data,
-            "powers": integral.powers,
+            "powers": integral.plain_powers,
             "dimension": integral.dimension,
             "orders": integral.orders,
+            "derivatives": _derivatives(data.get("derivatives", ()), integral),
         }
 
     @model_validator(mode="after")
@@ -218,6 +227,17 @@ class IntegralConfig(_Section):
         """Family, powers, dimension and orders as the mathematics takes them."""
         return Integral.parse(self.family, self.powers, self.dimension, self.orders)
 
+    @cached_property
+    def results(self) -> dict[str, Integral]:
+        """What this section puts into the tables: the integral, then its derivatives, by name.
+
+        The derivative by p^2 and m1^2 of `name` goes by `name_d_p_squared_m1_squared`.
+        """
+        found = {self.name: self.integral}
+        for names in self.derivatives:
+            found["_".join((self.name, "d", *names))] = replace(self.integral, derivatives=names)
+        return found
+
     def expressions(self) -> dict[str, Expression]:
         """Return the kinematics by key; an imaginary part goes by `MassKeys.imaginary`."""
         found: dict[str, Expression] = {}
@@ -228,6 +248,24 @@ class IntegralConfig(_Section):
             elif value is not None:
                 found[key] = value
         return found
+
+
+def _derivatives(entries: object, integral: Integral) -> tuple[tuple[str, ...], ...]:
+    """Return the derivatives of an integral, each in the standard order of its variables."""
+    if not isinstance(entries, list | tuple):
+        raise InputError(f'derivatives = {_toml(entries)}; accepted: an array, as ["p_squared"]')
+    found: list[tuple[str, ...]] = []
+    for entry in entries:
+        names = check_derivatives(entry, FAMILIES[integral.family].variables)
+        if not names:
+            raise InputError("derivatives has an empty entry; accepted: one to four variables")
+        if names in found:
+            raise InputError(
+                f"derivatives has {_toml(entry)} twice; accepted: each derivative once, whatever "
+                "the order of its variables"
+            )
+        found.append(names)
+    return tuple(found)
 
 
 _KINEMATIC_KEYS = ("p_squared", *(key for lines in _MASS_KEYS.values() for k in lines for key in k))
@@ -350,14 +388,19 @@ class RunConfig(_Section):
 
     @model_validator(mode="after")
     def _check_names(self) -> Self:
-        names = [integral.name for integral in self.integrals]
+        names = [name for integral in self.integrals for name in integral.results]
         for name in names:
             if names.count(name) > 1:
                 raise InputError(
                     f'[[integral]] name = "{name}" is given {names.count(name)} times; '
-                    "accepted: a different name for each integral"
+                    "accepted: a different name for each integral and each derivative"
                 )
         return self
+
+    @property
+    def results(self) -> dict[str, Integral]:
+        """All integrals and derivatives of the tables by name, in their order."""
+        return {name: one for entry in self.integrals for name, one in entry.results.items()}
 
     @property
     def where(self) -> str:

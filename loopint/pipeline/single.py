@@ -34,12 +34,13 @@ from loopint.pipeline.plan import RowRequest
 from loopint.pipeline.tables import DECIMAL_GUARD, proven_digits, write_integral
 
 if TYPE_CHECKING:
-    from collections.abc import Mapping
+    from collections.abc import Mapping, Sequence
 
     from flint import fmpq
 
     from loopint.core.laurent import LaurentSeries
     from loopint.core.numbers import Ball
+    from loopint.formulas.formula import Formula
 
 CHECK_DIGITS = 12  # what the quadrature is asked for, if the point itself asks for more
 BOUND_DIGITS = 3
@@ -82,9 +83,10 @@ class PointResult:
         """Return the result as JSON-able data; numbers are decimal strings."""
         found: dict[str, Any] = {
             "family": self.integral.family,
-            "powers": list(self.integral.powers),
+            "powers": list(self.integral.plain_powers),
             "dimension": self.integral.dimension,
             "orders": list(self.integral.orders),
+            "derivatives": list(self.integral.derivatives),
             "kinematics": self.kinematics,
             "conventions": {
                 "mu_squared": str(self.conventions.mu_squared),
@@ -124,6 +126,7 @@ def evaluate_point(
     powers: str | None = None,
     dimension: int = 4,
     orders: str = "-1,0",
+    derivatives: Sequence[str] = (),
     digits: int = 30,
     mu_squared: str = "1",
     propagator_sign: str = "minkowski",
@@ -143,6 +146,8 @@ def evaluate_point(
         rationals, a complex squared mass is "re,im"; None for what was not given.
     powers, orders
         Integers separated by commas.
+    derivatives
+        The variables to differentiate by, once for each time.
     check
         Also integrate the Feynman representation.
 
@@ -157,9 +162,10 @@ def evaluate_point(
         raise InputError(f"family {family!r} {unknown_name(family, FAMILIES)}")
     integral = Integral.parse(
         family,
-        None if powers is None else _integers("powers", powers, "such as 1,1"),
+        None if powers is None else _powers(powers),
         dimension,
         _pair(orders),
+        tuple(derivatives),
     )
     given = {name: value for name, value in kinematics.items() if value is not None}
     point = _point(family, given)
@@ -194,6 +200,36 @@ def evaluate_point(
         )
     coefficients = [_coefficient(series, order) for order in series]
     return PointResult(integral, conventions, given, series, coefficients, checks)
+
+
+def requested_formula(
+    family: str,
+    *,
+    powers: str | None = None,
+    kinematics: str = "general",
+    dimension: int = 4,
+    orders: str = "-1,2",
+    propagator_sign: str = "minkowski",
+    measure: str = "msbar",
+) -> Formula:
+    """Return the closed form of an integral whose powers and orders are given as text.
+
+    Raises
+    ------
+    InputError, UnsupportedIntegralError
+        See `loopint.formula`.
+    """
+    from loopint.formulas.build import build_formula  # noqa: PLC0415 - sympy is slow to import
+
+    return build_formula(
+        family,
+        None if powers is None else _integers("powers", powers, "such as 1,1"),
+        kinematics=kinematics,
+        dimension=dimension,
+        orders=_pair(orders),
+        propagator_sign=propagator_sign,
+        measure=measure,
+    )
 
 
 def _coefficient(series: LaurentSeries, order: int) -> Coefficient:
@@ -282,6 +318,21 @@ def _integers(name: str, text: str, example: str) -> tuple[int, ...]:
         raise InputError(
             f"{_option(name)} {text!r}; accepted: integers separated by commas, {example}"
         ) from None
+
+
+def _powers(text: str) -> list[int | tuple[int, str]]:
+    """Read powers separated by commas; n:a stands for n + a eps."""
+    result: list[int | tuple[int, str]] = []
+    for part in text.split(","):
+        n, colon, rate = part.partition(":")
+        try:
+            result.append((int(n), rate) if colon else int(n))
+        except ValueError:
+            raise InputError(
+                f"--powers {text!r}; accepted: integers separated by commas, such as 1,1; for a "
+                "propagator also n:a for n + a eps, such as 1:1/2,1"
+            ) from None
+    return result
 
 
 def _pair(text: str) -> tuple[int, int]:
