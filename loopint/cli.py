@@ -92,10 +92,11 @@ def validate(config: CONFIG) -> None:
 Examples:
   loopint point bubble --p-squared 5 --m1-squared 1 --m2-squared 1/4 --orders -1,2
   loopint point bubble --p-squared -1 --m1 1.2 --width1 0.01 --m2 0 --cross-check
+  loopint point bubble --p-squared 5 --m1 1 --m2 1/2 --derivative p_squared
   loopint point tadpole --m-squared 1,-1/10 --powers 2 --digits 50 --json"""
 )
 def point(
-    family: Annotated[str, typer.Argument(metavar="FAMILY", help="tadpole or bubble.")],
+    family: Annotated[str, typer.Argument(metavar="FAMILY", help="tadpole, bubble or propagator.")],
     *,
     p_squared: Annotated[
         str | None, typer.Option(metavar="NUMBER", help="p^2, any sign: 0.25, 1e-3, -1/4.")
@@ -116,12 +117,24 @@ def point(
     m: Annotated[str | None, typer.Option("--m", metavar="NUMBER")] = None,
     width: Annotated[str | None, typer.Option(metavar="NUMBER")] = None,
     powers: Annotated[
-        str | None, typer.Option(metavar="N[,N]", help="Powers of the propagators (default 1).")
+        str | None,
+        typer.Option(
+            metavar="N[,N]",
+            help="Powers of the propagators (default 1); in a propagator n:a is n + a eps.",
+        ),
     ] = None,
     dimension: Annotated[int, typer.Option(metavar="D0", help="d = D0 - 2 eps, 1 to 12.")] = 4,
     orders: Annotated[
         str, typer.Option(metavar="LOW,HIGH", help="Powers of epsilon, inclusive.")
     ] = "-1,0",
+    derivative: Annotated[
+        list[str] | None,
+        typer.Option(
+            metavar="NAME",
+            help="Differentiate by p_squared, m1_squared, m2_squared or m_squared; repeat for a "
+            "higher derivative.",
+        ),
+    ] = None,
     digits: Annotated[int, typer.Option(metavar="N", help="Proven digits, 5 to 2000.")] = 30,
     mu_squared: Annotated[str, typer.Option(metavar="NUMBER", help="mu^2 > 0.")] = "1",
     propagator_sign: Annotated[
@@ -163,6 +176,7 @@ def point(
         powers=powers,
         dimension=dimension,
         orders=orders,
+        derivatives=derivative or (),
         digits=digits,
         mu_squared=mu_squared,
         propagator_sign=propagator_sign,
@@ -176,6 +190,62 @@ def point(
     else:
         show_point(result)
     raise typer.Exit(result.exit_code)
+
+
+@app.command(
+    epilog="""\b
+Examples:
+  loopint formula bubble
+  loopint formula bubble --kinematics equal_mass --dimension 3 --format latex
+  loopint formula tadpole --powers 2 --orders -1,4 --format python > tadpole.py"""
+)
+def formula(
+    family: Annotated[str, typer.Argument(metavar="FAMILY", help="tadpole, bubble or propagator.")],
+    *,
+    powers: Annotated[
+        str | None,
+        typer.Option(
+            metavar="N[,N]",
+            help="Powers of the propagators (default 1); in a propagator n:a is n + a eps.",
+        ),
+    ] = None,
+    kinematics: Annotated[
+        str,
+        typer.Option(
+            metavar="NAME",
+            help="general, equal_mass, one_massless, both_massless, zero_momentum, "
+            "zero_momentum_equal_mass, zero_momentum_one_massless, threshold, pseudothreshold or "
+            "on_shell.",
+        ),
+    ] = "general",
+    dimension: Annotated[int, typer.Option(metavar="D0", help="d = D0 - 2 eps, 1 to 12.")] = 4,
+    orders: Annotated[
+        str, typer.Option(metavar="LOW,HIGH", help="Powers of epsilon, inclusive, at most 8.")
+    ] = "-1,2",
+    form: Annotated[
+        str, typer.Option("--format", metavar="NAME", help="text, latex, python or sympy.")
+    ] = "text",
+    propagator_sign: Annotated[
+        str, typer.Option(metavar="NAME", help="minkowski or euclidean.")
+    ] = "minkowski",
+    measure: Annotated[
+        str, typer.Option(metavar="NAME", help="msbar, plain, gamma, r_gamma or two_pi.")
+    ] = "msbar",
+) -> None:
+    """Print the closed form of an integral and its Laurent coefficients."""
+    from loopint.console import show_formula
+    from loopint.pipeline.single import requested_formula
+
+    found = requested_formula(
+        family,
+        powers=powers,
+        kinematics=kinematics,
+        dimension=dimension,
+        orders=orders,
+        propagator_sign=propagator_sign,
+        measure=measure,
+    )
+    show_formula(found, form)
 
 
 def main() -> None:

@@ -23,6 +23,7 @@ from rich.text import Text
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator
 
+    from loopint.formulas.formula import Formula
     from loopint.pipeline.estimate import Survey
     from loopint.pipeline.run import RunOutcome
     from loopint.pipeline.single import PointResult
@@ -173,8 +174,9 @@ def show_point(result: PointResult) -> None:
     out, integral, conventions = _stdout(), result.integral, result.conventions
     kinematics = ", ".join(f"{name} = {value}" for name, value in result.kinematics.items())
     powers = ",".join(map(str, integral.powers))
+    by = "".join(f"d/d({name}) " for name in integral.derivatives)
     out.print(
-        f"{integral.family}({powers}), d = {integral.dimension} - 2 eps: {escape(kinematics)}"
+        f"{by}{integral.family}({powers}), d = {integral.dimension} - 2 eps: {escape(kinematics)}"
     )
     out.print(
         f"mu_squared = {conventions.mu_squared}, propagator_sign = {conventions.propagator_sign}, "
@@ -207,6 +209,11 @@ def show_point(result: PointResult) -> None:
             f"loopint: below {result.series.digits} digits at {result.series.precision_bits} bits; "
             "accepted: a larger --max-precision-bits"
         )
+
+
+def show_formula(formula: Formula, form: str) -> None:
+    """Print a closed form exactly as it is written: its output can be run or typeset."""
+    print(formula.printed(form), end="")
 
 
 def _width(result: PointResult) -> int:

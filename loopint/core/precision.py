@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from collections.abc import Iterator
 
 BITS_PER_DIGIT = math.log2(10)
-WORD = 64
+WORD = 32
 
 
 @contextmanager
@@ -68,5 +68,5 @@ def bits_for_digits(digits: int) -> int:
 
 
 def round_up_to_word(bits: int) -> int:
-    """Round up to a multiple of 64 so that points share kinematics-independent tables."""
+    """Round up to a multiple of 32 so that points share kinematics-independent tables."""
     return -(-bits // WORD) * WORD

@@ -118,12 +118,12 @@ def check_derivatives(names: object, variables: Sequence[str]) -> tuple[str, ...
     ('p_squared', 'm1_squared')
     """
     found = (names,) if isinstance(names, str) else names
-    accepted = f"accepted: names out of {', '.join(variables)}, at most {MAX_DERIVATIVES}"
+    accepted = f"accepted: up to {MAX_DERIVATIVES} names out of {', '.join(variables)}"
     if not isinstance(found, tuple | list) or len(found) > MAX_DERIVATIVES:
         raise InputError(f"derivatives = {names!r}; {accepted}")
     for name in found:
         if name not in variables:
-            raise InputError(f"derivatives = {names!r}: {name!r} is unknown; {accepted}")
+            raise InputError(f"derivatives: {name!r} is unknown; {accepted}")
     return tuple(sorted(found, key=list(variables).index))
 
 

@@ -276,7 +276,7 @@ def _quadrature(
     point: TwoPoint, powers: Powers, dimension: int, highest: int, measure: Measure
 ) -> BallSeries:
     """Integrate the Feynman-parameter representation to about the working precision."""
-    lowest = -2
+    lowest = min(-2, highest)
     digits = max(5, int(current_bits() / BITS_PER_DIGIT) - QUADRATURE_GUARD_DIGITS)
     result = integrate_feynman(
         point,

@@ -1,24 +1,25 @@
 """Reduction of two-point integrals to masters by exact relations between them.
 
-Euclidean sign, D1 = m1^2 - q^2, D2 = m2^2 - (q+p)^2, c = m1^2 + m2^2 - p^2, lambda = c^2 - 4 m1^2 m2^2,
-and B(n1, n2) in d dimensions.  The integral of a total derivative vanishes in dimensional
+With euclidean sign, D1 = m1^2 - q^2, D2 = m2^2 - (q+p)^2, let c = m1^2 + m2^2 - p^2 and
+lambda = c^2 - 4 m1^2 m2^2.  The integral of a total derivative vanishes in dimensional
 regularisation (Chetyrkin, Tkachov, Nucl. Phys. B192 (1981) 159); with d/dq.q it reads
 
-    (d - 2 n1 - n2) B(n1, n2) + 2 n1 m1^2 B(n1+1, n2) + n2 c B(n1, n2+1) - n2 B(n1-1, n2+1) = 0,   (1)
+    (d - 2 n1 - n2) B(n1, n2) + 2 n1 m1^2 B(n1+1, n2)
+        + n2 c B(n1, n2+1) - n2 B(n1-1, n2+1) = 0,                                        (1)
 
 and (2) is (1) with the lines exchanged.  Dimensions are connected by (Tarasov, hep-th/9606018)
 
-    B^(d-2)(n1, n2) = n1 B^(d)(n1+1, n2) + n2 B^(d)(n1, n2+1).                                      (3)
+    B^(d-2)(n1, n2) = n1 B^(d)(n1+1, n2) + n2 B^(d)(n1, n2+1).                            (3)
 
 What lowers n1 + n2 is decided by the kinematics alone:
 
-=========================  =========================================================================
-lambda != 0                (1) and (2) solved for B(n1+1, n2) and B(n1, n2+1); ends in B(1, 1)
-lambda = 0, c != 0         (1) and (2) are dependent on their highest terms: what is left over lowers
-                           B(n, 1), and (1) leads there; ends in tadpoles
-lambda = 0, c = 0          on shell with a massless line: (1) ends in tadpoles
-p^2 = 0, m1 = m2           D1 = D2: B(n1, n2) = A(n1+n2)
-=========================  =========================================================================
+====================  ==========================================================================
+lambda != 0           (1) and (2) solved for B(n1+1, n2) and B(n1, n2+1); ends in B(1, 1)
+lambda = 0, c != 0    the highest terms of (1) and (2) are proportional: the rest lowers B(n, 1),
+                      where (1) leads; ends in tadpoles
+lambda = 0, c = 0     on shell with a massless line: (1) alone ends in tadpoles
+p^2 = 0, m1 = m2      D1 = D2, so B(n1, n2) = A(n1+n2)
+====================  ==========================================================================
 
 At p^2 = 0 with different masses B(1, 1) is itself a difference of two tadpoles.
 """
@@ -192,7 +193,7 @@ def reduce_bubble(
         d0, an integer from 1 to 20.  The symbol `d` in the coefficients is d0 - 2 eps.
     kinematics
         A name of `Kinematics`.  Special kinematics have fewer masters: at threshold, at
-        pseudothreshold, on shell and at p^2 = 0 there are only tadpoles, without masses only B(1, 1).
+        pseudothreshold, on shell and at p^2 = 0 only tadpoles, without masses only B(1, 1).
     master_dimension
         The d0 of all masters, of the same parity as `dimension`; by default 4 for even and 3 for
         odd dimensions.
