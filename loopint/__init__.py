@@ -1,5 +1,7 @@
 """One-loop scalar integrals over many kinematic points, every number with a proven error bound."""
 
+from typing import TYPE_CHECKING, Any
+
 from loopint.api import bubble, formula, propagator, tadpole
 from loopint.core.errors import (
     InputError,
@@ -11,9 +13,17 @@ from loopint.core.errors import (
 from loopint.core.laurent import LaurentSeries
 from loopint.integrals.reduction import Reduction, reduce_bubble
 
+if TYPE_CHECKING:
+    from loopint.arrays.bubble import bubble_array
+    from loopint.arrays.result import ArrayResult
+    from loopint.arrays.tadpole import tadpole_array
+
 __version__ = "0.1.0"
 
+_ARRAYS = {"ArrayResult": "result", "bubble_array": "bubble", "tadpole_array": "tadpole"}
+
 __all__ = [
+    "ArrayResult",
     "InputError",
     "LaurentSeries",
     "LoopintError",
@@ -23,8 +33,19 @@ __all__ = [
     "UnsupportedIntegralError",
     "__version__",
     "bubble",
+    "bubble_array",
     "formula",
     "propagator",
     "reduce_bubble",
     "tadpole",
+    "tadpole_array",
 ]
+
+
+def __getattr__(name: str) -> Any:  # noqa: ANN401 - PEP 562
+    """Import the array functions, and NumPy with them, when they are first used."""
+    if name not in _ARRAYS:
+        raise AttributeError(f"module 'loopint' has no attribute {name!r}")
+    from importlib import import_module  # noqa: PLC0415
+
+    return getattr(import_module(f"loopint.arrays.{_ARRAYS[name]}"), name)

@@ -108,6 +108,12 @@ def compare(point: Kinematics, digits: int) -> Comparison:
         two, (1, 1), 4, ORDERS, Conventions(), digits=digits, arithmetic="mpmath"
     )
     ended = time.perf_counter()
+    if any(
+        abs(found[k] - reference.values[k]) > found.bounds[k] + reference.errors[k] for k in found
+    ):  # the estimate of the reference is not proven: let more digits decide
+        reference = integrate_feynman(
+            two, (1, 1), 4, ORDERS, Conventions(), digits=digits + 20, arithmetic="mpmath"
+        )
     misses, agreed, reached = [], math.inf, math.inf
     with mpmath.workdps(digits + 30):
         for k in found:

@@ -135,7 +135,8 @@ def test_defaults(tmp_path: Path) -> None:
     assert config.output.formats == ("parquet",)
     assert config.execution.engine == "local"
     assert config.execution.workers is None
-    assert config.execution.chunk_rows == 1000
+    assert config.execution.chunk_rows is None
+    assert config.execution.scheduler is None
 
 
 def test_every_key(tmp_path: Path) -> None:
@@ -281,9 +282,9 @@ MISTAKES = [
     ("[points]", "[point]", "point is unknown; did you mean points?"),
     ("powers = [1, 1]", "power = [1, 1]", '[[integral]] "alder_cedar" power is unknown; did you '),
     ("width2 =", "Width2 =", '[[integral]] "alder_cedar" Width2 is unknown; did you mean width'),
-    ("workers = 3", "scheduler = 3", "[execution] scheduler is unknown; accepted: engine, wo"),
+    ("workers = 3", "threads = 3", "[execution] threads is unknown; accepted: engine, schedul"),
     ("[execution]", "[[comparison]]\n[execution]", "comparison is unknown; accepted: title, "),
-    ("powers = [2]", 'derivatives = ["p_squared"]', '[[integral]] "cedar" derivatives is unknown'),
+    ("powers = [2]", 'derivatives = ["p_squared"]', "names out of m_squared"),
     # sections
     ("[conventions]", "[[conventions]]", "conventions = [{...}] is not a section; accepted: [conv"),
     ("[[integral]]", "[integral_]", "integral_ is unknown; did you mean integral?"),
@@ -310,7 +311,11 @@ MISTAKES = [
     ('directory = "runs/full"', "", "[output] directory is missing; accepted: the path of a dir"),
     ('file = "points.parquet"', "", "[points] file is missing; accepted: the path of a Parquet"),
     ('key = "point"', "key = 3", "[points] key = 3; accepted: the name of a column"),
-    ('"local"', '"dask"', '[execution] engine = "dask"; accepted: local'),
+    ('"local"', '"threads"', '[execution] engine = "threads"; accepted: "local" or "dask"'),
+    ("workers = 3", "scheduler = 3", "[execution] scheduler = 3; accepted: with engine = "),
+    ("workers = 3", 'scheduler = "a:1"', '[execution] scheduler = "a:1"; accepted: with engine'),
+    ("workers = 3", 'scheduler = "tcp://a:1"', '[execution] scheduler = "tcp://a:1" needs engine'),
+    ('"local"', '"dask"\nscheduler = "tcp://a:1"', "[execution] workers = 3 cannot be chosen w"),
     ("workers = 3", "workers = 0", "[execution] workers = 0; accepted: an integer from 1 to 1024"),
     ("rows = 10", "rows = 0", "[execution] chunk_rows = 0; accepted: an integer from 1 to 1000000"),
     ('"r_gamma"', '"ms_bar"', '[conventions] measure = "ms_bar"; accepted: msbar, plain, gamma, r'),

@@ -12,13 +12,15 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from loopint.core.conventions import Conventions, Measure
+from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.core.errors import InputError, UnsupportedIntegralError
 from loopint.core.kinematics import OnePoint, Region, TwoPoint
 from loopint.core.numbers import exact_complex, exact_real
 from loopint.core.precision import working_precision
 from loopint.integrals.registry import Integral, evaluate
 from loopint.quadrature import integrate_feynman
-from loopint.quadrature.balls import BALLS, Integrand, gauss_legendre, integrate
+from loopint.quadrature.balls import BALLS, gauss_legendre, integrate
+from loopint.quadrature.exponents import Integrand
 from loopint.quadrature.paths import build_path, zero_orders
 
 MSBAR = Conventions()
@@ -288,20 +290,14 @@ def test_a_dot_is_a_mass_derivative(case, dimension):
 @pytest.mark.parametrize("dimension", [1, 3, 4, 5, 6, 9, 12])
 @pytest.mark.parametrize("powers", [(1, 1), (2, 1), (1, 2), (3, 2)])
 def test_other_powers_and_dimensions_in_two_arithmetics(dimension, powers):
-    compared = 0
     for case in ("below threshold", "above threshold", "threshold", "massless", "one complex mass"):
         point = two_point(*CASES[case])
-        try:
-            balls = integrate_feynman(point, powers, dimension, (-1, 1), MSBAR)
-        except UnsupportedIntegralError:
-            continue
+        balls = integrate_feynman(point, powers, dimension, (-1, 1), MSBAR)
         other = integrate_feynman(
             point, powers, dimension, (-1, 1), MSBAR, digits=10, arithmetic="mpmath"
         )
         assert balls.reached_digits >= 12
         assert_same(balls, other, (-1, 1))
-        compared += 1
-    assert compared >= 3  # the two regular cases and the complex one always converge
 
 
 def test_a_pole_that_vanishes_is_exactly_zero():
@@ -422,17 +418,18 @@ def _parts(value):
 
 
 def test_moments_of_a_logarithm():
-    # Q = x for p^2 = 0, m1^2 = 1, m2 = 0, and Int_0^1 log(x)^k/k! dx = (-1)^k (elementary).
+    # Q = x for p^2 = 0, m1^2 = 1, m2 = 0, and Int_0^1 x^(-eps) dx = 1/(1-eps) (elementary).
+    zero = EpsilonLinear.of(0, 0)
     with working_precision(100):
         path = build_path(two_point(0, 1, 0), BALLS)
-        moments = integrate(path, Integrand((1, 1), fmpq(0), 12))
-        for k, moment in enumerate(moments):
-            assert moment.contains((-1) ** k)
+        quadratic = EpsilonLinear.of(0, -1)
+        for moment in integrate(path, Integrand(zero, zero, quadratic, 12)):
+            assert moment.contains(1)
             assert moment.rad() < arb("1e-22")
-        # Int_0^1 x^(3/2 - 1) log(x)^k/k! dx = (-1)^k (2/3)^(k+1)
-        moments = integrate(path, Integrand((2, 1), fmpq(-1, 2), 6))
-        for k, moment in enumerate(moments):
-            assert moment.overlaps(arb((-1) ** k * fmpq(2, 3) ** (k + 1)))
+        # Int_0^1 x^(1 - 1/2 - eps) dx = 1/(3/2 - eps)
+        first, quadratic = EpsilonLinear.of(1, 0), EpsilonLinear.of("-1/2", -1)
+        for k, moment in enumerate(integrate(path, Integrand(first, zero, quadratic, 6))):
+            assert moment.overlaps(arb(fmpq(2, 3) ** (k + 1)))
             assert moment.rad() < arb("1e-22")
 
 
@@ -475,23 +472,10 @@ def test_orders_below_the_pole_are_exactly_zero():
     assert integrate_feynman(point, (1, 1), 3, (-1, 0), MSBAR).balls[-1] == 0
 
 
-@pytest.mark.parametrize(
-    ("case", "powers", "dimension", "named"),
-    [
-        ("threshold", (2, 1), 4, "threshold"),
-        ("threshold", (1, 1), 3, "threshold"),
-        ("on shell", (1, 1), 3, "m2 = 0"),
-        ("on shell, exchanged", (1, 1), 3, "m1 = 0"),
-        ("massless", (1, 2), 4, "m2 = 0"),
-        ("massless", (1, 1), 2, "m2 = 0"),
-        ("one massless, below", (1, 2), 4, "m2 = 0"),
-        ("below threshold", (0, 1), 4, "at least 1"),
-        ("below threshold", (1, -1), 4, "at least 1"),
-    ],
-)
-def test_divergent_parameter_integrals_are_refused(case, powers, dimension, named):
-    with pytest.raises(UnsupportedIntegralError, match=named):
-        integrate_feynman(two_point(*CASES[case]), powers, dimension, (-1, 0), MSBAR)
+@pytest.mark.parametrize("powers", [(0, 1), (1, -1)])
+def test_numerators_are_refused(powers):
+    with pytest.raises(UnsupportedIntegralError, match="at least 1"):
+        integrate_feynman(two_point(*CASES["below threshold"]), powers, 4, (-1, 0), MSBAR)
 
 
 def test_convergent_dots_on_a_massive_line_are_accepted():

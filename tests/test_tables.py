@@ -25,6 +25,7 @@ from loopint.pipeline.errors import ConfigError
 from loopint.pipeline.evaluate import Computed
 from loopint.pipeline.plan import RowRequest
 from loopint.pipeline.tables import (
+    IntegralColumns,
     TableLayout,
     check_csv_key,
     cross_check_schema,
@@ -76,8 +77,10 @@ def test_bounds_and_decimals_hold_for_every_number_in_the_ball(re, im, exponent,
         ball = acb(re * unit + halo, im * unit + halo)
     number = written(ball, 20)
     corners = [
-        (fraction(ball.real.mid()) + j * radius, fraction(ball.imag.mid()) + k * radius)
-        for radius in (fraction(ball.real.rad()),)
+        (
+            fraction(ball.real.mid()) + j * fraction(ball.real.rad()),
+            fraction(ball.imag.mid()) + k * fraction(ball.imag.rad()),
+        )
         for j in (-1, 1)
         for k in (-1, 1)
     ]
@@ -143,11 +146,20 @@ def test_numbers_below_float64_keep_a_true_bound():
     assert number.digits > 30
 
 
+def columns(layout: TableLayout, rows: list) -> list[IntegralColumns]:
+    """The columns of rows of written integrals."""
+    found = layout.columns()
+    for row in rows:
+        for one, column in zip(row, found, strict=True):
+            column.append(one)
+    return found
+
+
 @pytest.mark.parametrize("digits", [16, 30])
 def test_long_layout(digits):
     layout = TableLayout("long", pa.field("point", pa.int32()), [("loop", ORDERS)], digits, {})
     rows = [[write_integral(bubble(digits=digits, p=p), digits)] for p in ("5", "2", "-1")]
-    table = layout.build(pa.array([7, 8, 9], type=pa.int32()), rows)
+    table = layout.build(pa.array([7, 8, 9], type=pa.int32()), columns(layout, rows))
     decimals = ["re_decimal", "im_decimal"] if digits > 17 else []
     assert table.column_names == [
         "point", "integral", "order", "re", "im", "re_bound", "im_bound", *decimals,
@@ -169,7 +181,7 @@ def test_long_layout(digits):
 def test_wide_layout_has_one_line_per_row():
     layout = TableLayout("wide", None, [("a", ORDERS), ("b", ORDERS)], 16, {})
     row = [write_integral(bubble("a"), 16), write_integral(bubble("b", p="-1"), 16)]
-    table = layout.build(pa.array([0], type=pa.int64()), [row])
+    table = layout.build(pa.array([0], type=pa.int64()), columns(layout, [row]))
     names = ["row"]
     for name in ("a", "b"):
         names += [f"{name}_region", f"{name}_status"]

@@ -315,18 +315,18 @@ def float_with_bound(ball: arb) -> tuple[float, float]:
 
 
 def _nearest_float(mantissa: int, exponent: int) -> float:
+    size = mantissa.bit_length()
     try:
         if exponent >= 0:
-            return (
-                float(mantissa << exponent)
-                if exponent < 2048
-                else math.copysign(math.inf, mantissa)
-            )
-        if exponent + mantissa.bit_length() > -1000:
+            if exponent < 2048:
+                return float(mantissa << exponent)
+        elif size < 1000 and exponent + size > -1000:
             return math.ldexp(float(mantissa), exponent)
-        return mantissa / (1 << -exponent)  # one rounding, also when the result is subnormal
+        else:
+            return mantissa / (1 << -exponent)  # one rounding, also when the result is subnormal
     except OverflowError:
-        return math.copysign(math.inf, mantissa)
+        pass
+    return math.inf if mantissa > 0 else -math.inf
 
 
 def rounds_uniquely(ball: arb) -> bool:

@@ -87,6 +87,18 @@ class EpsilonTable:
             [polynomial(u) + (tail if real else acb(tail, tail)) for polynomial, tail in pieces],
         )
 
+    def shortest(self, radius: arb, goal: arb) -> list[tuple[list[arb], arb]]:
+        """Return, for each power of epsilon, coefficients whose tail is below `goal`.
+
+        Beside the coefficients stands a bound on the tail for |u| <= radius, at the working
+        precision; it exceeds the goal only if the computed length does not reach it.
+        """
+        pieces = []
+        for k, coefficients in enumerate(self._orders):
+            terms = self._terms_needed(k, radius, goal)
+            pieces.append((coefficients[:terms], self._tail(k, radius, terms)))
+        return pieces
+
     def _truncate(self, exponent: int) -> list[tuple[arb_poly, arb]]:
         """Cut polynomials for |u| <= largest_radius 2^-exponent."""
         with working_precision(64):

@@ -2,21 +2,23 @@
 
 from __future__ import annotations
 
+import platform
 from collections import Counter
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, field, fields
 from typing import TYPE_CHECKING, Any, TypeAlias
 
+import numpy as np
 import pyarrow as pa
 
-from loopint.pipeline.cross_check import DISAGREES, Check, cross_check, is_sampled
-from loopint.pipeline.evaluate import Computed, RowRejectedError, evaluate_row
+from loopint.pipeline.cross_check import DISAGREES, Check, cross_check, sample
+from loopint.pipeline.errors import ConfigError
+from loopint.pipeline.evaluate import RowRejectedError, evaluate_row
 from loopint.pipeline.manifest import table_metadata
 from loopint.pipeline.plan import plan_integrals
 from loopint.pipeline.points import exact_rows, open_points
-from loopint.pipeline.run_directory import ChunkRecord, RunDirectory
+from loopint.pipeline.run_directory import MAX_PARTS, ChunkRecord, OutputError, RunDirectory
 from loopint.pipeline.tables import (
     TableLayout,
-    WrittenIntegral,
     check_csv_key,
     cross_check_schema,
     records_table,
@@ -29,20 +31,29 @@ if TYPE_CHECKING:
     from loopint.pipeline.config import RunConfig
     from loopint.pipeline.plan import Cells, IntegralPlan
     from loopint.pipeline.points import PointsSource
+    from loopint.pipeline.tables import IntegralColumns
 
 
 PlacedCheck: TypeAlias = tuple[int, str, Check]  # position in the chunk, integral, comparison
 
+NAMED_DISAGREEMENTS = 20  # so many are named, the others only counted
+FEWEST_ROWS, MOST_ROWS = 250, 8000
+MANY_DIGITS, MOST_ROWS_WITH_MANY_DIGITS = 100, 1000  # their decimals take memory
+CHUNKS = 32  # enough for even loads, if they are not too small
 
-def chunk_bounds(source: PointsSource, chunk_rows: int, index: int) -> tuple[int, int]:
-    """Return the first row of a chunk and its number of rows."""
-    start = index * chunk_rows
-    return start, min(chunk_rows, source.row_count - start)
 
+def default_chunk_rows(row_count: int, digits: int) -> int:
+    """Return how many rows make a chunk, by default.
 
-def chunk_count(source: PointsSource, chunk_rows: int) -> int:
-    """Return the number of chunks."""
-    return -(-source.row_count // chunk_rows)
+    Depends on what the table depends on, never on the number of workers.
+
+    Examples
+    --------
+    >>> [default_chunk_rows(rows, 16) for rows in (10, 2_000, 100_000, 10**7)]
+    [250, 250, 3125, 8000]
+    """
+    most = MOST_ROWS if digits <= MANY_DIGITS else MOST_ROWS_WITH_MANY_DIGITS
+    return max(FEWEST_ROWS, min(most, -(-row_count // CHUNKS)), -(-row_count // MAX_PARTS))
 
 
 @dataclass(frozen=True)
@@ -53,6 +64,8 @@ class OpenedRun:
     ----------
     key
         The field of the user's key column, or None.
+    chunk_rows
+        Rows of every chunk but the last.
     """
 
     source: PointsSource
@@ -61,6 +74,17 @@ class OpenedRun:
     layout: TableLayout
     rejected_schema: pa.Schema
     cross_check_schema: pa.Schema
+    chunk_rows: int
+
+    @property
+    def chunk_count(self) -> int:
+        """The number of chunks."""
+        return -(-self.source.row_count // self.chunk_rows)
+
+    def chunk_bounds(self, index: int) -> tuple[int, int]:
+        """Return the first row of a chunk and its number of rows."""
+        start = index * self.chunk_rows
+        return start, min(self.chunk_rows, self.source.row_count - start)
 
 
 def open_run(config: RunConfig, source: PointsSource | None = None) -> OpenedRun:
@@ -84,103 +108,188 @@ def open_run(config: RunConfig, source: PointsSource | None = None) -> OpenedRun
         config.accuracy.digits,
         table_metadata(config),
     )
-    return OpenedRun(source, plans, key, layout, rejected_schema(key), cross_check_schema(key))
+    return OpenedRun(
+        source,
+        plans,
+        key,
+        layout,
+        rejected_schema(key),
+        cross_check_schema(key),
+        _chunk_rows(config, source.row_count),
+    )
+
+
+def _chunk_rows(config: RunConfig, row_count: int) -> int:
+    chosen = config.execution.chunk_rows
+    if chosen is None:
+        return default_chunk_rows(row_count, config.accuracy.digits)
+    if row_count > chosen * MAX_PARTS:
+        raise ConfigError(
+            f"{config.where}[execution] chunk_rows = {chosen} makes more than {MAX_PARTS} files of "
+            f"{row_count} rows; accepted: at least {-(-row_count // MAX_PARTS)}"
+        )
+    return chosen
+
+
+@dataclass(frozen=True)
+class Block:
+    """Rows as they were read.
+
+    Attributes
+    ----------
+    start
+        The number of the first row.
+    keys
+        The key of each row.
+    table
+        The columns that the plans use, as they are in the file.
+    """
+
+    start: int
+    keys: pa.Array
+    table: pa.Table
+
+    def cells(self) -> list[Cells]:
+        """Return the exact values of each row."""
+        if not self.table.num_columns:
+            return [{}] * len(self.keys)
+        return list(exact_rows(self.table, self.table.column_names))
 
 
 class RowReader:
-    """Reads rows with their keys and the exact values of the columns that the plans use."""
+    """Reads rows with their keys and the columns that the plans use."""
 
     def __init__(self, opened: OpenedRun) -> None:
         self.source = opened.source
         self.key = None if opened.key is None else opened.key.name
         self.columns = sorted({column for plan in opened.plans for column in plan.columns})
 
-    def read(self, start: int, count: int) -> tuple[pa.Array, list[Cells]]:
-        """Return keys and cells of `count` rows from row `start` on."""
-        rows: list[Cells] = [{}] * count
-        keys = pa.array(range(start, start + count), type=pa.int64())
+    def read(self, start: int, count: int) -> Block:
+        """Return `count` rows from row `start` on."""
+        keys = pa.array(np.arange(start, start + count))
         wanted = [*self.columns, *([] if self.key is None else [self.key])]
         if not wanted:
-            return keys, rows
+            return Block(start, keys, pa.table({}))
         table = self.source.read_rows(start, count, wanted)
-        if self.columns:
-            rows = list(exact_rows(table, self.columns))
         if self.key is not None:
             keys = table.unify_dictionaries().column(self.key).combine_chunks()
-        return keys, rows
+        return Block(start, keys, table.select(self.columns))
+
+
+@dataclass
+class ChunkResults:
+    """What became of the rows of a chunk; its files are written from this.
+
+    Attributes
+    ----------
+    integrals
+        The results of the accepted rows, in the order of the plans.
+    accepted
+        Their positions in the chunk.
+    refused
+        Position and reason of the other rows.
+    checks
+        The cross-checks, in the order of the rows.
+    """
+
+    integrals: list[IntegralColumns]
+    accepted: list[int] = field(default_factory=list)
+    refused: list[tuple[int, RowRejectedError]] = field(default_factory=list)
+    checks: list[PlacedCheck] = field(default_factory=list)
+
+
+def evaluate_block(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkResults:
+    """Evaluate and cross-check rows one after the other."""
+    accuracy, check = config.accuracy, config.cross_check
+    results = ChunkResults(opened.layout.columns())
+    sampled = [
+        sample(check.seed, plan.name, block.start, len(block.keys), check.fraction).tolist()
+        for plan in opened.plans
+    ]
+    for position, cells in enumerate(block.cells()):
+        try:
+            row = evaluate_row(
+                opened.plans,
+                cells,
+                digits=accuracy.digits,
+                max_precision_bits=accuracy.max_precision_bits,
+            )
+        except RowRejectedError as error:
+            results.refused.append((position, error))
+            continue
+        results.accepted.append(position)
+        for computed, columns, chosen in zip(row, results.integrals, sampled, strict=True):
+            written = write_integral(computed, accuracy.digits)
+            columns.append(written)
+            if chosen[position]:
+                found = cross_check(
+                    computed, written, digits=check.digits, arithmetic=check.arithmetic
+                )
+                results.checks += [(position, computed.name, one) for one in found]
+    return results
 
 
 class ChunkEvaluator:
-    """Evaluates chunks of one run and writes their files."""
+    """Evaluates chunks of one run and writes their files.
 
-    def __init__(self, config: RunConfig, source: PointsSource) -> None:
+    Parameters
+    ----------
+    config, source
+        The run, with paths that hold where this process works.
+    plan
+        The hash of its plan, which the directory must hold.
+    """
+
+    def __init__(self, config: RunConfig, source: PointsSource, plan: str) -> None:
         self.config = config
+        self.plan = plan
         self.opened = open_run(config, source)
         self.reader = RowReader(self.opened)
         self.directory = RunDirectory(config.output.directory)
 
     def __call__(self, index: int) -> ChunkRecord:
-        """Evaluate chunk `index`, write its files and return its record."""
-        accuracy = self.config.accuracy
-        start, count = chunk_bounds(self.opened.source, self.config.execution.chunk_rows, index)
-        keys, rows = self.reader.read(start, count)
-        positions: list[int] = []
-        accepted: list[list[Computed]] = []
-        refused: list[tuple[int, RowRejectedError]] = []
-        for position, cells in enumerate(rows):
-            try:
-                computed = evaluate_row(
-                    self.opened.plans,
-                    cells,
-                    digits=accuracy.digits,
-                    max_precision_bits=accuracy.max_precision_bits,
-                )
-            except RowRejectedError as error:
-                refused.append((position, error))
-            else:
-                positions.append(position)
-                accepted.append(computed)
-        results = [[write_integral(one, accuracy.digits) for one in row] for row in accepted]
-        table = self.opened.layout.build(keys.take(pa.array(positions, type=pa.int64())), results)
-        checks = self._check(start, positions, accepted, results)
-        self._write_rejected(index, start, keys, refused)
-        self._write_checks(index, start, keys, checks)
-        sha256 = write_parquet(self.directory.part(index), table)
+        """Evaluate chunk `index`, write its files and return its record.
+
+        Raises
+        ------
+        OutputError
+            If the directory is not that of the run, or a file cannot be written.
+        """
+        if self.directory.plan_hash() != self.plan:
+            raise OutputError(
+                f"{self.directory.path} is not the directory of this run for a worker process on "
+                f"{platform.node()}; accepted: a directory that all workers share and that no "
+                "other run replaces"
+            )
+        start, count = self.opened.chunk_bounds(index)
+        block = self.reader.read(start, count)
+        keys = block.keys
+        results = evaluate_block(self.config, self.opened, block)
+        table = self.opened.layout.build(
+            keys.take(pa.array(results.accepted, type=pa.int64())), results.integrals
+        )
         record = ChunkRecord(
             index=index,
             rows=count,
-            rows_in_table=len(accepted),
-            rows_rejected=len(refused),
+            rows_in_table=len(results.accepted),
+            rows_rejected=len(results.refused),
             table_lines=table.num_rows,
-            table_sha256=sha256,
-            **self._count(results),
-            **self._count_checks(start, checks),
+            rejected_sha256=self._write_rejected(index, start, keys, results.refused),
+            checked_sha256=self._write_checks(index, start, keys, results.checks),
+            table_sha256=write_parquet(self.directory.part(index), table),
+            counts={one.name: one.counts() for one in results.integrals},
+            worst_digits={one.name: one.worst_digits() for one in results.integrals},
+            precision_bits=max(one.precision_bits for one in results.integrals),
+            **self._count_checks(start, results.checks),
         )
         self.directory.commit(record)
         return record
 
-    def _check(
-        self,
-        start: int,
-        positions: list[int],
-        accepted: list[list[Computed]],
-        results: list[list[WrittenIntegral]],
-    ) -> list[PlacedCheck]:
-        settings = self.config.cross_check
-        found: list[PlacedCheck] = []
-        for position, row, result in zip(positions, accepted, results, strict=True):
-            for computed, table in zip(row, result, strict=True):
-                name = computed.name
-                if is_sampled(settings.seed, start + position, name, settings.fraction):
-                    checks = cross_check(
-                        computed, table, digits=settings.digits, arithmetic=settings.arithmetic
-                    )
-                    found += [(position, name, check) for check in checks]
-        return found
-
     def _write_rejected(
         self, index: int, start: int, keys: pa.Array, refused: list[tuple[int, RowRejectedError]]
-    ) -> None:
+    ) -> str | None:
+        if not refused:
+            return None
         columns: dict[str, list[Any]] = {
             "row": [start + position for position, _ in refused],
             "integral": [error.integral for _, error in refused],
@@ -188,11 +297,13 @@ class ChunkEvaluator:
         }
         schema = self.opened.rejected_schema
         table = records_table(schema, keys, [position for position, _ in refused], columns)
-        write_parquet(self.directory.rejected_chunk(index), table)
+        return write_parquet(self.directory.rejected_chunk(index), table)
 
     def _write_checks(
         self, index: int, start: int, keys: pa.Array, checks: list[PlacedCheck]
-    ) -> None:
+    ) -> str | None:
+        if not checks:
+            return None
         columns: dict[str, list[Any]] = {
             "row": [start + position for position, _, _ in checks],
             "integral": [name for _, name, _ in checks],
@@ -201,21 +312,7 @@ class ChunkEvaluator:
             columns[f.name] = [getattr(check, f.name) for _, _, check in checks]
         schema = self.opened.cross_check_schema
         table = records_table(schema, keys, [position for position, _, _ in checks], columns)
-        write_parquet(self.directory.checked_chunk(index), table)
-
-    def _count(self, results: list[list[WrittenIntegral]]) -> dict[str, Any]:
-        """Return the fields of the record that describe the evaluated rows."""
-        names = [plan.name for plan in self.opened.plans]
-        counts: dict[str, dict[str, dict[str, int]]] = {name: {} for name in names}
-        worst: dict[str, int | None] = dict.fromkeys(names)
-        bits = 0
-        for row in results:
-            for one in row:
-                by_status = counts[one.name].setdefault(one.region, {})
-                by_status[one.status] = by_status.get(one.status, 0) + 1
-                worst[one.name] = smallest(worst[one.name], *(n.digits for n in one.numbers))
-                bits = max(bits, one.precision_bits)
-        return {"counts": counts, "worst_digits": worst, "precision_bits": bits}
+        return write_parquet(self.directory.checked_chunk(index), table)
 
     def _count_checks(self, start: int, checks: list[PlacedCheck]) -> dict[str, Any]:
         """Return the fields of the record that describe the cross-checks."""
@@ -224,14 +321,15 @@ class ChunkEvaluator:
         for _, name, check in checks:
             statuses[name][check.status] += 1
             agreement[name] = smallest(agreement[name], check.agreed_digits)
+        disagreements = [
+            (start + position, name, check.order)
+            for position, name, check in checks
+            if check.status == DISAGREES
+        ]
         return {
             "checks": {name: dict(counts) for name, counts in statuses.items()},
             "worst_agreement": agreement,
-            "disagreements": [
-                (start + position, name, check.order)
-                for position, name, check in checks
-                if check.status == DISAGREES
-            ],
+            "disagreements": disagreements[:NAMED_DISAGREEMENTS],
         }
 
 

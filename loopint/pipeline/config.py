@@ -349,16 +349,38 @@ class OutputConfig(_Section):
 class ExecutionConfig(_Section):
     """`[execution]`: how the work is spread; never changes a result."""
 
-    engine: Literal["local"] = Field(default="local", description="local")
+    engine: Literal["local", "dask"] = Field(default="local", description='"local" or "dask"')
+    scheduler: str | None = Field(
+        default=None,
+        pattern=r"^(tcp|tls|ws|wss)://\S+$",
+        description='with engine = "dask": the address of a scheduler, as "tcp://host:8786"',
+    )
     workers: int | None = Field(
         default=None,
         ge=1,
         le=1024,
         description="an integer from 1 to 1024 (left out: the usable cores)",
     )
-    chunk_rows: int = Field(
-        default=1000, ge=1, le=1_000_000, description="an integer from 1 to 1000000"
+    chunk_rows: int | None = Field(
+        default=None,
+        ge=1,
+        le=1_000_000,
+        description="an integer from 1 to 1000000 (left out: by the number of rows)",
     )
+
+    @model_validator(mode="after")
+    def _check_scheduler(self) -> Self:
+        if self.scheduler is not None and self.engine != "dask":
+            raise InputError(
+                f'scheduler = {_toml(self.scheduler)} needs engine = "dask"; accepted: both, or '
+                "no scheduler"
+            )
+        if self.scheduler is not None and self.workers is not None:
+            raise InputError(
+                f"workers = {self.workers} cannot be chosen with a scheduler, which has its own; "
+                "accepted: one of the two keys"
+            )
+        return self
 
 
 class RunConfig(_Section):
@@ -496,6 +518,8 @@ def _sentence(error: ValidationError, raw: Mapping[str, Any]) -> str:
     if loc and loc[0] in _SECTIONS:
         section, loc = str(loc[0]), loc[1:]
         if not loc:
+            if first["type"] == "value_error":  # keys that do not fit together
+                return f"{_brackets(section)} {first['ctx']['error']}"
             return _section_sentence(section, first["type"], raw)
         model, where, data = _SECTIONS[section], f"[{section}] ", raw[section]
         if isinstance(loc[0], int):

@@ -4,24 +4,31 @@ from __future__ import annotations
 
 import hashlib
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from decimal import Decimal
-from typing import TYPE_CHECKING, Literal
+from typing import TYPE_CHECKING, Any, Literal
 
+import mpmath
+import numpy as np
 from flint import acb, arb
 from mpmath.libmp import NoConvergence
 
 from loopint.core.errors import LoopintError
 from loopint.core.laurent import complex_ball
-from loopint.core.numbers import exact_complex, exact_real, float_with_bound
+from loopint.core.numbers import exact_complex, exact_real, float_with_bound, mpf_with_bound
 from loopint.core.precision import BITS_PER_DIGIT, working_precision
 from loopint.quadrature import integrate_feynman
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator
+    from collections.abc import Iterator, Mapping, Sequence
 
+    from flint import fmpq
+    from numpy.typing import NDArray
+
+    from loopint.core.epsilon_linear import EpsilonLinear
     from loopint.core.numbers import Ball
     from loopint.pipeline.evaluate import Computed
+    from loopint.pipeline.plan import RowRequest
     from loopint.pipeline.tables import WrittenIntegral
     from loopint.quadrature import QuadratureResult
 
@@ -69,22 +76,36 @@ class Check:
     note: str | None = None
 
 
-def is_sampled(seed: int, row: int, name: str, fraction: Decimal | str) -> bool:
-    """Whether an integral of a row is cross-checked.
+def sample(
+    seed: int, name: str, start: int, count: int, fraction: Decimal | str
+) -> NDArray[np.bool_]:
+    """Tell for `count` rows from `start` on whether an integral is cross-checked.
 
-    The choice depends on these arguments alone, not on chunks or workers.
+    The choice depends on seed, name, row and fraction alone, not on chunks or workers.  Row r gets
+    output r of the generator SplitMix64 (Steele, Lea and Flood, OOPSLA 2014), started from a hash
+    of seed and name.
 
     Examples
     --------
-    >>> sum(is_sampled(1, row, "loop", Decimal("0.1")) for row in range(10_000))
-    968
+    >>> chosen = sample(1, "loop", 0, 10_000, Decimal("0.1"))
+    >>> int(chosen.sum())
+    957
+    >>> again = sample(1, "loop", 500, 9, Decimal("0.1"))
+    >>> (again == chosen[500:509]).tolist() == [True] * 9
+    True
     """
-    if fraction == "all":
-        return True
+    if fraction in ("all", 1):
+        return np.ones(count, dtype=bool)
     if fraction == "none":
-        return False
-    digest = hashlib.blake2b(f"{seed}:{row}:{name}".encode(), digest_size=8).digest()
-    return int.from_bytes(digest, "big") < int(Decimal(fraction) * 2**64)
+        return np.zeros(count, dtype=bool)
+    digest = hashlib.blake2b(f"{seed}:{name}".encode(), digest_size=8).digest()
+    state = np.arange(start + 1, start + count + 1, dtype=np.uint64)
+    state = state * np.uint64(0x9E3779B97F4A7C15) + np.frombuffer(digest, dtype="<u8")
+    state = (state ^ (state >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+    state = (state ^ (state >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+    state ^= state >> np.uint64(31)
+    chosen: NDArray[np.bool_] = state < np.uint64(int(Decimal(fraction) * 2**64))
+    return chosen
 
 
 def cross_check(
@@ -108,18 +129,8 @@ def cross_check(
         "balls": both sides are enclosures and must overlap.  "mpmath": the difference must not
         exceed 10^-digits |value| plus the bound of the table and the error estimate.
     """
-    request = computed.request
-    integral = request.integral
     try:
-        result = integrate_feynman(
-            request.point,
-            integral.powers,
-            integral.dimension,
-            integral.orders,
-            request.conventions,
-            digits=digits,
-            arithmetic=arithmetic,
-        )
+        result = _integrated(computed.request, digits, arithmetic)
         with working_precision(128 + 2 * math.ceil(digits * BITS_PER_DIGIT)):
             return list(_compare(computed, table, result, digits))
     except LoopintError as error:
@@ -136,6 +147,57 @@ def cross_check(
         )
         for order, number in enumerate(table.numbers, start=table.lowest_order)
     ]  # fmt: skip
+
+
+def _integrated(
+    request: RowRequest, digits: int, arithmetic: Literal["balls", "mpmath"]
+) -> QuadratureResult:
+    """Integrate an integral, or the one its derivative is a multiple of."""
+    integral, term = request.integral, request.integral.term
+    lowest, highest = integral.orders
+    result = integrate_feynman(
+        request.point,
+        tuple(_quadrature_power(n) for n in term.powers),
+        term.dimension,
+        (lowest - len(term.linear_factors), highest),  # a factor eps raises the orders
+        request.conventions,
+        digits=digits,
+        arithmetic=arithmetic,
+    )
+    if not integral.derivatives:
+        return result
+    bits = 128 + 2 * math.ceil(digits * BITS_PER_DIGIT)
+    with working_precision(bits), mpmath.workprec(bits):
+        weights = [arb(term.factor(request.conventions))]
+        for linear in term.linear_factors:
+            pairs = zip([*weights, arb(0)], [arb(0), *weights], strict=True)
+            weights = [same * linear.constant + below * linear.rate for same, below in pairs]
+        rounded = [mpf_with_bound(weight, digits + 20)[0] for weight in weights]
+        sizes = [abs(weight) for weight in rounded]
+        return replace(
+            result,
+            orders=integral.orders,
+            values=_weighted(result.values, rounded, integral.orders),
+            errors=_weighted(result.errors, sizes, integral.orders),
+            balls=_weighted(result.balls, weights, integral.orders),
+        )
+
+
+def _quadrature_power(power: int | EpsilonLinear) -> int | tuple[int, fmpq]:
+    """Return n, or (n, a) for n + a eps."""
+    return power if isinstance(power, int) else (int(power.constant.p), power.rate)
+
+
+def _weighted(
+    series: Mapping[int, Any], weights: Sequence[Any], orders: tuple[int, int]
+) -> dict[int, Any]:
+    """Multiply a series in eps, empty or known below the orders, by a polynomial."""
+    if not series:
+        return {}
+    return {
+        k: sum((weight * series[k - j] for j, weight in enumerate(weights)), start=0)
+        for k in range(orders[0], orders[1] + 1)
+    }
 
 
 def _compare(

@@ -1,4 +1,4 @@
-"""Where tasks run: in this process, or on a pool of worker processes."""
+"""Where tasks run: in this process, on a pool of worker processes, or on a Dask cluster."""
 
 from __future__ import annotations
 
@@ -8,22 +8,50 @@ import signal
 import threading
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
-from contextlib import contextmanager
+from functools import partial
 from itertools import islice
 from multiprocessing import connection
-from typing import TYPE_CHECKING, Any, TypeVar
+from typing import TYPE_CHECKING, Any, TypeAlias, TypeVar
 
-from loopint.core.errors import LoopintError
+from loopint.pipeline.errors import EngineError
+from loopint.pipeline.interrupts import interrupts_held
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator, Sequence
+    from collections.abc import Callable, Generator, Iterator, Sequence
 
 Task = TypeVar("Task")
 Result = TypeVar("Result")
 
 
-class EngineError(LoopintError):
-    """The worker processes failed, not the calculation."""
+Engine: TypeAlias = (
+    "Callable[[Callable[[], Callable[[Any], Any]], Sequence[Any]], Generator[Any, None, None]]"
+)
+"""Takes `make` and `tasks` and yields results; see `run_tasks`."""
+
+
+def choose_engine(name: str, workers: int, scheduler: str | None = None) -> Engine:
+    """Return the engine of that name.
+
+    Parameters
+    ----------
+    name
+        "local" or "dask".
+    workers
+        Number of worker processes; with a scheduler it has its own.
+    scheduler
+        Address of a running Dask scheduler.
+
+    Raises
+    ------
+    ConfigError
+        If Dask is not installed.
+    """
+    if name == "dask":
+        from loopint.pipeline import dask_engine  # noqa: PLC0415 - optional
+
+        dask_engine.require_dask()
+        return partial(dask_engine.run_tasks_on_dask, workers=workers, scheduler=scheduler)
+    return partial(run_tasks, workers=workers)
 
 
 def usable_cores() -> int:
@@ -35,7 +63,7 @@ def usable_cores() -> int:
 
 def run_tasks(
     make: Callable[[], Callable[[Task], Result]], tasks: Sequence[Task], workers: int
-) -> Iterator[Result]:
+) -> Generator[Result, None, None]:
     """Yield the result of every task, in the order in which they finish.
 
     Parameters
@@ -85,26 +113,13 @@ def _results(pool: ProcessPoolExecutor, tasks: Iterator[Any], window: int) -> It
     running: set[Future[Any]] = set()
     while True:
         for task in islice(tasks, window - len(running)):
-            with _interrupts_held():  # a new worker inherits this: Ctrl-C is for the parent
+            with interrupts_held():  # a new worker inherits this: Ctrl-C is for the parent
                 running.add(pool.submit(_do, task))
         if not running:
             return
         done, running = wait(running, return_when=FIRST_COMPLETED)
         for future in done:
             yield future.result()
-
-
-@contextmanager
-def _interrupts_held() -> Iterator[None]:
-    """Deliver Ctrl-C only after the block, where the system can do that."""
-    if not hasattr(signal, "pthread_sigmask"):  # pragma: no cover - Windows
-        yield
-        return
-    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
-    try:
-        yield
-    finally:
-        signal.pthread_sigmask(signal.SIG_SETMASK, before)
 
 
 _function: Callable[[Any], Any] | None = None

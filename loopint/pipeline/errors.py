@@ -15,6 +15,10 @@ class ConfigError(LoopintError):
     """Nothing can be run: one sentence names the file, key or column, and what is accepted."""
 
 
+class EngineError(LoopintError):
+    """The worker processes failed, not the calculation."""
+
+
 def unknown_name(name: str, known: Iterable[str]) -> str:
     """Return the end of a sentence about an unknown name: the nearest known one, then all.
 

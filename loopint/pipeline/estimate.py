@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 
 import pyarrow as pa
 
-from loopint.pipeline.chunks import OpenedRun, RowReader, chunk_bounds, chunk_count, open_run
+from loopint.pipeline.chunks import OpenedRun, RowReader, open_run
 from loopint.pipeline.cross_check import cross_check
 from loopint.pipeline.engines import run_tasks
 from loopint.pipeline.evaluate import RowRejectedError, evaluate_row, row_requests
@@ -95,25 +95,23 @@ class _ChunkSurveyor:
     """Classifies the rows of a chunk."""
 
     def __init__(self, config: RunConfig, source: PointsSource) -> None:
-        self.config = config
-        self.source = source
-        opened = open_run(config, source)
-        self.plans = opened.plans
-        self.reader = RowReader(opened)
+        self.opened = open_run(config, source)
+        self.plans = self.opened.plans
+        self.reader = RowReader(self.opened)
 
     def __call__(self, index: int) -> _ChunkSurvey:
-        start, count = chunk_bounds(self.source, self.config.execution.chunk_rows, index)
-        keys, rows = self.reader.read(start, count)
+        start, count = self.opened.chunk_bounds(index)
+        block = self.reader.read(start, count)
         regions: dict[str, Counter[str]] = {plan.name: Counter() for plan in self.plans}
         rejected = 0
         rejections: list[Rejection] = []
-        for position, cells in enumerate(rows):
+        for position, cells in enumerate(block.cells()):
             try:
                 requests = row_requests(self.plans, cells)
             except RowRejectedError as error:
                 rejected += 1
                 if len(rejections) < SHOWN_REJECTIONS:
-                    key = keys[position].as_py()
+                    key = block.keys[position].as_py()
                     rejections.append(
                         Rejection(key, start + position, error.integral, error.reason)
                     )
@@ -134,7 +132,7 @@ def survey_config(config: RunConfig, *, progress: Progress | None = None) -> Sur
     """
     opened = open_run(config)
     source, plans = opened.source, opened.plans
-    chunks = _classify(config, source, progress)
+    chunks = _classify(config, opened, progress)
     good = source.row_count - sum(chunk.rejected for chunk in chunks)
     regions: dict[str, Counter[str]] = {plan.name: Counter() for plan in plans}
     for chunk in chunks:
@@ -161,9 +159,10 @@ def survey_config(config: RunConfig, *, progress: Progress | None = None) -> Sur
 
 
 def _classify(
-    config: RunConfig, source: PointsSource, progress: Progress | None
+    config: RunConfig, opened: OpenedRun, progress: Progress | None
 ) -> list[_ChunkSurvey]:
-    indices = range(chunk_count(source, config.execution.chunk_rows))
+    source = opened.source
+    indices = range(opened.chunk_count)
     # Classifying a row is so cheap that processes only pay for many rows.
     workers = worker_count(config) if source.row_count > PARALLEL_ROWS else 1
     found: list[_ChunkSurvey] = []
@@ -185,9 +184,9 @@ def _time_sample(config: RunConfig, opened: OpenedRun) -> tuple[float, float]:
     keys: list[pa.Array] = []
     rows = []
     for row in sample:
-        key, cells = reader.read(row, 1)
-        keys.append(key)
-        rows += cells
+        block = reader.read(row, 1)
+        keys.append(block.keys)
+        rows += block.cells()
 
     def evaluate() -> list[list[Computed]]:
         computed = []
@@ -211,7 +210,11 @@ def _time_sample(config: RunConfig, opened: OpenedRun) -> tuple[float, float]:
     if not computed:
         return 0.0, 0.0
     results = [[write_integral(one, config.accuracy.digits) for one in row] for row in computed]
-    opened.layout.build(pa.concat_arrays(keys).slice(0, len(computed)), results)
+    columns = opened.layout.columns()
+    for result in results:
+        for written, column in zip(result, columns, strict=True):
+            column.append(written)
+    opened.layout.build(pa.concat_arrays(keys).slice(0, len(computed)), columns)
     row_seconds = (time.perf_counter() - started) / len(computed)
     if not config.cross_check.share:
         return row_seconds, 0.0

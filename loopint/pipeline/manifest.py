@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 WITHOUT_EFFECT = {
     "points": ("file",),
     "output": ("directory", "formats"),
-    "execution": ("engine", "workers"),
+    "execution": ("engine", "workers", "scheduler", "chunk_rows"),  # chunk_rows: as used
 }
 
 
@@ -33,11 +33,12 @@ def package_version() -> str:
         return "unknown"
 
 
-def plan_hash(config: RunConfig, input_hashes: Mapping[str, str]) -> str:
+def plan_hash(config: RunConfig, input_hashes: Mapping[str, str], chunk_rows: int) -> str:
     """Return the SHA-256 of everything that determines the results of a run.
 
-    These are the config without title, paths, formats and workers, the contents of the input files
-    in their order, and the version of the package.
+    These are the config without title, paths, formats and engine, the rows of a chunk, the
+    contents of the input files in their order, and the versions of the package and of what its
+    numbers rest on.
     """
     relevant = deepcopy(config_as_dict(config))
     relevant.pop("title", None)
@@ -45,7 +46,8 @@ def plan_hash(config: RunConfig, input_hashes: Mapping[str, str]) -> str:
         for name in names:
             relevant.get(section, {}).pop(name, None)
     content = {
-        "version": package_version(),
+        "versions": decisive_versions(),
+        "chunk_rows": chunk_rows,
         "inputs": list(input_hashes.values()),
         "config": relevant,
     }
@@ -61,6 +63,11 @@ def versions() -> dict[str, str]:
     for name in ("python-flint", "mpmath", "pyarrow"):
         found[name] = metadata.version(name)
     return found
+
+
+def decisive_versions() -> dict[str, str]:
+    """Return the versions that processes working on one table must share."""
+    return {name: version for name, version in versions().items() if name != "python"}
 
 
 def table_metadata(config: RunConfig) -> dict[str, Any]:

@@ -117,14 +117,14 @@ Line: TypeAlias = _SquaredMass | _MassAndWidth | _FixedMass
 
 @dataclass(frozen=True, slots=True)
 class IntegralPlan:
-    """One `[[integral]]` of the config, ready to be applied to rows.
+    """One integral of the config, or a derivative of it, ready to be applied to rows.
 
     Attributes
     ----------
     index, name
-        Place in the config, and the user's name.
+        Place of the section in the config, and the name in the tables.
     integral
-        Family, powers, dimension and orders.
+        Family, powers, dimension, orders and derivatives.
     columns
         The columns that its kinematics and mu^2 need, sorted.
     """
@@ -212,19 +212,21 @@ def plan_integrals(config: RunConfig, source: PointsSource) -> tuple[IntegralPla
         for key, quantity in quantities.items():
             source.check_columns(quantity.columns, f"{where} {key}")
         needed = mu_squared.columns.union(*(found.columns for found in quantities.values()))
-        plans.append(
+        lines = tuple(_line(quantities, keys, where) for keys in entry.mass_keys)
+        plans += [
             IntegralPlan(
                 index,
-                entry.name,
-                entry.integral,
+                name,
+                integral,
                 tuple(sorted(needed)),
-                tuple(_line(quantities, keys, where) for keys in entry.mass_keys),
+                lines,
                 quantities.get("p_squared"),
                 mu_squared,
                 tolerance,
                 conventions,
             )
-        )
+            for name, integral in entry.results.items()
+        ]
     return tuple(plans)
 
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import os
 from bisect import bisect_right
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import accumulate
 from pathlib import Path
 from typing import TYPE_CHECKING, TypeAlias
@@ -31,15 +31,34 @@ BUFFER_BYTES = 1 << 20  # stream column chunks instead of loading whole row grou
 
 @dataclass(frozen=True, slots=True)
 class PointsFile:
-    """One Parquet file: where it is, and how many rows each of its row groups holds."""
+    """One Parquet file: where it is, how many rows each of its row groups holds, and its state.
+
+    The state is the size and the time of the last change in nanoseconds.
+    """
 
     path: Path
     group_rows: tuple[int, ...]
+    state: tuple[int, int]
 
     @property
     def row_count(self) -> int:
         """Rows in the file."""
         return sum(self.group_rows)
+
+    def check_unchanged(self) -> None:
+        """Raise `ConfigError` if the file is not the one that was opened."""
+        try:
+            changed = _state(self.path) != self.state
+        except OSError as error:
+            raise ConfigError(
+                f"{self.path} cannot be read: {_first_line(error)}; "
+                "accepted: a file that stays in place during the run"
+            ) from None
+        if changed:
+            raise ConfigError(
+                f"{self.path} has changed since it was opened; "
+                "accepted: a file that stays unchanged during the run"
+            )
 
 
 class PointsSource:
@@ -129,6 +148,7 @@ class PointsSource:
             index = bisect_right(self._starts, start) - 1  # the last of equals skips empty files
             offset = self._starts[index]
             batch = self._batch(self.parts[index], start - offset, names)
+            self.parts[index].check_unchanged()  # what was read is what was hashed
             piece = batch.slice(0, stop - start)
             # files may differ in what a field says besides its type, such as "not null"
             pieces.append(pa.RecordBatch.from_arrays(piece.columns, schema=schema))
@@ -145,13 +165,25 @@ class PointsSource:
     def hashes(self) -> dict[str, str]:
         """Return the SHA-256 of every file, by path."""
         found = {}
-        for path in self.files:
+        for part in self.parts:
+            path = part.path
             try:
                 with path.open("rb") as stream:
                     found[path.as_posix()] = hashlib.file_digest(stream, "sha256").hexdigest()
             except OSError as error:
                 raise ConfigError(f"{path} cannot be read: {error.strerror or error}") from None
+            part.check_unchanged()
         return found
+
+    def check_unchanged(self) -> None:
+        """Raise `ConfigError` if a file has changed since it was opened."""
+        for part in self.parts:
+            part.check_unchanged()
+
+    def with_absolute_paths(self) -> PointsSource:
+        """Return the same source for a process that works in another directory."""
+        parts = [replace(part, path=part.path.absolute()) for part in self.parts]
+        return PointsSource(parts, self.schema, self.key)
 
 
 class _Cursor:
@@ -167,6 +199,7 @@ class _Cursor:
         self.batches = self._open(group)
 
     def _open(self, group: int) -> Iterator[pa.RecordBatch]:
+        self.part.check_unchanged()
         groups = list(range(group, len(self.part.group_rows)))
         try:
             # partitioning is the business of the directory, not of a single file
@@ -261,8 +294,8 @@ def _parquet_files(path: Path) -> list[Path]:
 def _inspect(path: Path) -> tuple[pa.Schema, PointsFile]:
     """Read the footer of one file."""
     try:
-        with path.open("rb"):
-            pass  # a plain message for a file that may not be read
+        with path.open("rb"):  # a plain message for a file that may not be read
+            state = _state(path)
     except OSError as error:
         raise ConfigError(f"{path} cannot be read: {error.strerror or error}") from None
     try:
@@ -279,7 +312,12 @@ def _inspect(path: Path) -> tuple[pa.Schema, PointsFile]:
     for name in names:
         if names.count(name) > 1:
             raise ConfigError(f"{path} has two columns named {name}; accepted: distinct names")
-    return schema, PointsFile(path, groups)
+    return schema, PointsFile(path, groups, state)
+
+
+def _state(path: Path) -> tuple[int, int]:
+    found = path.stat()
+    return found.st_size, found.st_mtime_ns
 
 
 def _check_same_columns(

@@ -1,9 +1,9 @@
 """The run directory: its files, its lock, and what a killed run left behind.
 
 Every file appears under its final name only when it is complete: it is written next to it under a
-name that starts with a dot and then renamed.  A chunk counts as finished when its record, written
-last, is there and its table part still has the recorded SHA-256.  The state of a run is nothing
-but these files and the plan hash in `manifest.json`.
+name of its own that starts with a dot, and then renamed.  A chunk counts as finished when its
+record, written last, is there and its other files still have the recorded SHA-256.  The state of a
+run is nothing but these files and the plan hash in `manifest.json`.
 """
 
 from __future__ import annotations
@@ -11,11 +11,13 @@ from __future__ import annotations
 import hashlib
 import json
 import os
+import secrets
 import shutil
 from contextlib import contextmanager, suppress
 from dataclasses import asdict, dataclass, field
 from typing import TYPE_CHECKING, Any
 
+from loopint.core.errors import LoopintError
 from loopint.pipeline.errors import ConfigError
 
 if TYPE_CHECKING:
@@ -23,6 +25,11 @@ if TYPE_CHECKING:
     from pathlib import Path
 
 Counts = dict[str, dict[str, dict[str, int]]]
+MAX_PARTS = 100_000  # names of parts sort like their numbers
+
+
+class OutputError(LoopintError):
+    """A file of the run cannot be written; what is finished is kept."""
 
 
 @dataclass(frozen=True)
@@ -33,8 +40,8 @@ class ChunkRecord:
     ----------
     index, rows, rows_in_table, rows_rejected, table_lines
         Which chunk, its source rows, and where they went.
-    table_sha256
-        Hash of its table part.
+    table_sha256, rejected_sha256, checked_sha256
+        Hashes of its files; None for a file that would be empty and is not written.
     counts
         integral -> region -> status -> number of rows.
     worst_digits
@@ -46,7 +53,7 @@ class ChunkRecord:
     worst_agreement
         integral -> smallest number of digits on which table and quadrature agree.
     disagreements
-        Row, integral and order of every coefficient that failed the cross-check.
+        Row, integral and order of the first coefficients that failed the cross-check.
     """
 
     index: int
@@ -55,6 +62,8 @@ class ChunkRecord:
     rows_rejected: int
     table_lines: int
     table_sha256: str
+    rejected_sha256: str | None = None
+    checked_sha256: str | None = None
     counts: Counts = field(default_factory=dict)
     worst_digits: dict[str, int | None] = field(default_factory=dict)
     precision_bits: int = 0
@@ -65,15 +74,38 @@ class ChunkRecord:
 
 @contextmanager
 def replacing(path: Path) -> Iterator[Path]:
-    """Give a temporary path in the same directory that becomes `path` if the block succeeds."""
-    temporary = path.with_name(f".{path.name}.tmp")
+    """Give a temporary path in the same directory that becomes `path` if the block succeeds.
+
+    Two processes that write the same file do not meet: the last complete one stays.
+
+    Raises
+    ------
+    OutputError
+        If the file cannot be written.
+    """
+    temporary = path.with_name(f".{path.name}.{secrets.token_hex(4)}.tmp")
     try:
         yield temporary
         os.replace(temporary, path)
+    except OSError as error:
+        _remove(temporary)
+        raise OutputError(
+            f"{path} cannot be written: {_reason(error)}; what is finished is kept, and the same "
+            "command continues from it"
+        ) from None
     except BaseException:
-        with suppress(OSError):
-            temporary.unlink()
+        _remove(temporary)
         raise
+
+
+def _remove(path: Path) -> None:
+    with suppress(OSError):
+        path.unlink()
+
+
+def _reason(error: OSError) -> str:
+    """Return why in the words of the system, also for the errors of Arrow."""
+    return os.strerror(error.errno) if error.errno else str(error)
 
 
 def write_json(path: Path, content: Any) -> None:  # noqa: ANN401 - any JSON value
@@ -129,17 +161,22 @@ class RunDirectory:
         Raises
         ------
         ConfigError
-            If the path is a file, or another run holds the directory.
-        OSError
-            If it cannot be written.
+            If the path is a file or cannot be written, or another run holds the directory.
         """
         if self.path.exists() and not self.path.is_dir():
             raise ConfigError(
                 f"[output] directory = {str(self.path)!r} is a file; accepted: a directory, "
                 "which is created if it does not exist"
             )
-        self.work.mkdir(parents=True, exist_ok=True)
-        with (self.work / "lock").open("w", encoding="ascii") as lock:
+        try:
+            self.work.mkdir(parents=True, exist_ok=True)
+            lock = (self.work / "lock").open("w", encoding="ascii")
+        except OSError as error:
+            raise ConfigError(
+                f"[output] directory = {str(self.path)!r} cannot be written: {_reason(error)}; "
+                "accepted: a directory that this user may write"
+            ) from None
+        with lock:
             try:
                 import fcntl  # noqa: PLC0415 - POSIX only
             except ImportError:  # pragma: no cover - elsewhere the user sees to it
@@ -163,7 +200,7 @@ class RunDirectory:
             If it holds the results of a different plan and `overwrite` is False, or files that
             no run has written.
         """
-        found = self._plan_hash()
+        found = self.plan_hash()
         if found is None:
             self._refuse_foreign_files()
         elif overwrite:
@@ -176,11 +213,12 @@ class RunDirectory:
         self.table.mkdir(exist_ok=True)
         for directory in (self.path, self.table, self.work):
             for leftover in directory.glob(".*.tmp"):
-                leftover.unlink()
+                leftover.unlink(missing_ok=True)
         if found != plan_hash or overwrite:
             write_json(self.manifest, manifest)
 
-    def _plan_hash(self) -> str | None:
+    def plan_hash(self) -> str | None:
+        """Return the hash of the plan whose results the directory holds, or None."""
         try:
             return str(json.loads(self.manifest.read_text(encoding="utf-8"))["plan_hash"])
         except FileNotFoundError:
@@ -204,7 +242,7 @@ class RunDirectory:
         shutil.rmtree(self.table, ignore_errors=True)
         for path in self.work.iterdir():
             if path.name != "lock":
-                path.unlink()
+                path.unlink(missing_ok=True)
         report = self.path / "report.html"
         for path in (self.csv, self.rejected, self.cross_check, self.summary, report):
             path.unlink(missing_ok=True)
@@ -218,10 +256,14 @@ class RunDirectory:
         """Return the record of a chunk if all its files are there and unchanged, else None."""
         try:
             record = ChunkRecord(**json.loads(self._record(index).read_text(encoding="utf-8")))
-            for path in (self.rejected_chunk(index), self.checked_chunk(index)):
-                if not path.is_file():
-                    return None
-            intact = file_sha256(self.part(index)) == record.table_sha256
-        except (FileNotFoundError, ValueError, TypeError):
+            intact = all(
+                expected is None or file_sha256(path) == expected
+                for path, expected in (
+                    (self.part(index), record.table_sha256),
+                    (self.rejected_chunk(index), record.rejected_sha256),
+                    (self.checked_chunk(index), record.checked_sha256),
+                )
+            )
+        except (OSError, ValueError, TypeError):
             return None
         return record if intact else None

@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pyarrow as pa
+import pyarrow.compute as pc
 import pyarrow.csv
 import pyarrow.parquet as pq
 
@@ -148,6 +149,71 @@ def proven_digits(ball: Ball) -> int | None:
     return min(max(math.floor(-decades - 1e-9), 0), 2**15 - 1)
 
 
+class IntegralColumns:
+    """The results of one integral in the rows of a chunk, column by column.
+
+    This is where evaluators and tables meet.  An evaluator of single rows calls `append`; one that
+    evaluates whole columns fills the attributes with NumPy or Arrow arrays instead.
+
+    Parameters
+    ----------
+    name
+        Name of the integral.
+    orders
+        Lowest and highest order.
+
+    Attributes
+    ----------
+    numbers
+        For each field of `Written` the columns of the orders, lowest first.
+    region, method, status
+        One entry per row.
+    precision_bits
+        The highest working precision of any row.
+    """
+
+    def __init__(self, name: str, orders: tuple[int, int]) -> None:
+        self.name = name
+        self.orders = range(orders[0], orders[1] + 1)
+        self.numbers: dict[str, list[Any]] = {
+            field: [[] for _ in self.orders] for field in Written.__slots__
+        }
+        self.region: Any = []
+        self.method: Any = []
+        self.status: Any = []
+        self.precision_bits = 0
+
+    def append(self, integral: WrittenIntegral) -> None:
+        """Add the result of the next row."""
+        self.region.append(integral.region)
+        self.method.append(integral.method)
+        self.status.append(integral.status)
+        self.precision_bits = max(self.precision_bits, integral.precision_bits)
+        for name, columns in self.numbers.items():
+            for column, number in zip(columns, integral.numbers, strict=True):
+                column.append(getattr(number, name))
+
+    def counts(self) -> dict[str, dict[str, int]]:
+        """Return region -> status -> number of rows."""
+        found: dict[str, dict[str, int]] = {}
+        groups = pa.table({"region": self.region, "status": self.status}, schema=_GROUPS)
+        counted = groups.group_by(["region", "status"], use_threads=False).aggregate(
+            [([], "count_all")]
+        )
+        for group in counted.to_pylist():
+            found.setdefault(group["region"], {})[group["status"]] = group["count_all"]
+        return found
+
+    def worst_digits(self) -> int | None:
+        """Return the smallest number of proven digits, None if every coefficient is exact."""
+        smallest = (pc.min(pa.array(column, _DIGITS)).as_py() for column in self.numbers["digits"])
+        return min((digits for digits in smallest if digits is not None), default=None)
+
+
+_DIGITS = pa.int16()
+_GROUPS = pa.schema([("region", pa.string()), ("status", pa.string())])
+
+
 def order_tag(order: int) -> str:
     """Return the name of an order in wide columns: `m1` for eps^-1, `0`, `1`, ..."""
     return f"m{-order}" if order < 0 else str(order)
@@ -224,45 +290,64 @@ class TableLayout:
             meanings["row"] = COLUMN_MEANINGS["row"]
         return meanings
 
-    def build(self, keys: pa.Array, rows: Sequence[Sequence[WrittenIntegral]]) -> pa.Table:
+    def columns(self) -> list[IntegralColumns]:
+        """Return what `build` takes, still without rows."""
+        return [IntegralColumns(name, orders) for name, orders in self.integrals]
+
+    def build(self, keys: pa.Array, integrals: Sequence[IntegralColumns]) -> pa.Table:
         """Return the table of some rows.
 
         Parameters
         ----------
         keys
             The key of each row.
-        rows
-            For each row its integrals, in the order of the plan.
+        integrals
+            Their results, in the order of the layout.
         """
-        columns: dict[str, list[Any]] = {name: [] for name in self.schema.names[1:]}
-        append = self._append_long if self.layout == "long" else self._append_wide
-        for row in rows:
-            for integral in row:
-                append(columns, integral)
-        if self.layout == "long":
-            lines = sum(highest - lowest + 1 for _, (lowest, highest) in self.integrals)
-            keys = keys.take(pa.array(np.repeat(np.arange(len(rows)), lines)))
-        arrays = [keys] + [pa.array(columns[f.name], type=f.type) for f in list(self.schema)[1:]]
-        return pa.Table.from_arrays(arrays, schema=self.schema)
+        arrange = self._long_arrays if self.layout == "long" else self._wide_arrays
+        return pa.Table.from_arrays(arrange(keys, integrals), schema=self.schema)
 
-    def _append_long(self, columns: dict[str, list[Any]], integral: WrittenIntegral) -> None:
-        for order, number in enumerate(integral.numbers, start=integral.lowest_order):
-            columns["integral"].append(integral.name)
-            columns["order"].append(order)
-            for name in self._numbers:
-                columns[name].append(getattr(number, name))
-            columns["digits"].append(number.digits)
-            columns["region"].append(integral.region)
-            columns["method"].append(integral.method)
-            columns["status"].append(integral.status)
+    def _long_arrays(self, keys: pa.Array, integrals: Sequence[IntegralColumns]) -> list[pa.Array]:
+        """Stack the columns of all integrals and orders, then bring the lines of a row together."""
+        rows = len(keys)
+        names = [one.name for one in integrals for _ in one.orders]
+        orders = [order for one in integrals for order in one.orders]
+        lines = len(names)
+        sorting = pa.array(np.arange(rows * lines).reshape(lines, rows).T.ravel())
+        found = {
+            self.key.name: keys.take(pa.array(np.repeat(np.arange(rows), lines))),
+            "integral": pa.array(names, pa.string()).take(_cycle(lines, rows)),
+            "order": pa.array(orders, pa.int16()).take(_cycle(lines, rows)),
+        }
+        for name in (*self._numbers, "digits"):
+            kind = self.schema.field(name).type
+            stacked = [_array(column, kind) for one in integrals for column in one.numbers[name]]
+            found[name] = pa.concat_arrays(stacked).take(sorting)
+        for name in ("region", "method", "status"):
+            repeated = [
+                _array(getattr(one, name), pa.string()) for one in integrals for _ in one.orders
+            ]
+            found[name] = pa.concat_arrays(repeated).take(sorting)
+        return [found[f.name] for f in self.schema]
 
-    def _append_wide(self, columns: dict[str, list[Any]], integral: WrittenIntegral) -> None:
-        columns[f"{integral.name}_region"].append(integral.region)
-        columns[f"{integral.name}_status"].append(integral.status)
-        for order, number in enumerate(integral.numbers, start=integral.lowest_order):
-            stem = f"{integral.name}_{order_tag(order)}_"
-            for name in self._numbers:
-                columns[stem + name].append(getattr(number, name))
+    def _wide_arrays(self, keys: pa.Array, integrals: Sequence[IntegralColumns]) -> list[pa.Array]:
+        arrays = [keys]
+        for one in integrals:
+            arrays += [_array(one.region, pa.string()), _array(one.status, pa.string())]
+            for place in range(len(one.orders)):
+                for name in self._numbers:
+                    kind = pa.string() if name.endswith("decimal") else pa.float64()
+                    arrays.append(_array(one.numbers[name][place], kind))
+        return arrays
+
+
+def _array(column: Any, kind: pa.DataType) -> pa.Array:  # noqa: ANN401 - list, NumPy or Arrow
+    return column.cast(kind) if isinstance(column, pa.Array) else pa.array(column, kind)
+
+
+def _cycle(length: int, times: int) -> pa.Array:
+    """Return 0, 1, ..., length - 1 over and over."""
+    return pa.array(np.tile(np.arange(length), times))
 
 
 def _number_field(name: str, column: str) -> pa.Field:
@@ -369,12 +454,15 @@ def merge_parquet(path: Path, schema: pa.Schema, parts: Iterable[Path]) -> None:
         pq.ParquetWriter(temporary, schema, compression="zstd") as writer,
     ):
         pending: list[pa.Table] = []
+        rows = 0
         for part in parts:
             with pq.ParquetFile(part) as file:  # not a dataset: paths have no meaning here
-                pending.append(file.read().cast(schema))
-            if sum(table.num_rows for table in pending) >= ROWS_PER_GROUP:
+                for batch in file.iter_batches(ROWS_PER_GROUP):
+                    pending.append(pa.Table.from_batches([batch]).cast(schema))
+                    rows += batch.num_rows
+            if rows >= ROWS_PER_GROUP:
                 writer.write_table(pa.concat_tables(pending))
-                pending = []
+                pending, rows = [], 0
         rest = pa.concat_tables(pending) if pending else schema.empty_table()
         if rest.num_rows:
             writer.write_table(rest)

@@ -1,12 +1,13 @@
-"""The Feynman-parameter representation of tadpoles and bubbles, integrated to Laurent coefficients.
+"""The Feynman-parameter representation of one- and two-point integrals, as Laurent coefficients.
 
-    B(n1,n2) = sign * N(eps) (mu^2)^eps Gamma(N-d/2) / (Gamma(n1) Gamma(n2))
-               * Int_0^1 dx x^(n1-1) (1-x)^(n2-1) Q(x)^(d/2-N),      N = n1 + n2,
-    Q(x)     = x m1^2 + (1-x) m2^2 - x(1-x) p^2 - i0,
+    P(nu1,nu2) = sign * N(eps) (mu^2)^eps Gamma(nu-d/2) / (Gamma(nu1) Gamma(nu2))
+                 * Int_0^1 dx x^(nu1-1) (1-x)^(nu2-1) Q(x)^(d/2-nu),      nu = nu1 + nu2,
+    Q(x)       = x m1^2 + (1-x) m2^2 - x(1-x) p^2 - i0,      nu_i = n_i + a_i eps.
 
-with Q^(-eps) = sum_k (-eps)^k log(Q)^k / k!, so that each order needs one more power of the
-logarithm.  A tadpole has no integral left; its Gamma function and power are evaluated with other
-code than the closed form uses.
+The integrand is expanded in eps, so that each order needs one more power of the logarithm
+a1 log x + a2 log(1-x) - (1+a1+a2) log Q; a divergence at an end, or at threshold, is continued
+analytically in eps.  A tadpole has no integral left; its Gamma function and power are evaluated
+with other code than the closed form uses.
 """
 
 from __future__ import annotations
@@ -16,10 +17,10 @@ from math import factorial, floor, log
 from typing import TYPE_CHECKING, Literal, TypeAlias
 
 import mpmath
-from flint import arb, fmpq
+from flint import acb, arb, fmpq
 
-from loopint.core.errors import InputError, MorePrecisionNeeded, UnsupportedIntegralError
-from loopint.core.kinematics import OnePoint, Region, TwoPoint
+from loopint.core.errors import InputError, MorePrecisionNeeded
+from loopint.core.kinematics import OnePoint, TwoPoint
 from loopint.core.laurent import check_orders
 from loopint.core.numbers import (
     Ball,
@@ -35,23 +36,23 @@ from loopint.core.precision import (
     round_up_to_word,
     working_precision,
 )
-from loopint.quadrature import balls, mpmath_arithmetic
-from loopint.quadrature.paths import (
-    build_path,
-    normalisation,
-    resolve_on_shell,
-    zero_orders,
-)
-from loopint.quadrature.prefactor import pole_order, scalar_prefactor
+from loopint.quadrature import balls, mpmath_arithmetic, mpmath_numbers, mpmath_prefactor
+from loopint.quadrature.exponents import Power, parse_power
+from loopint.quadrature.paths import build_path, normalisation, resolve_on_shell
+from loopint.quadrature.prefactor import scalar_prefactor
+from loopint.quadrature.representation import Representation
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
 
     from loopint.core.conventions import Conventions
+    from loopint.core.epsilon_linear import EpsilonLinear
+    from loopint.quadrature.mpmath_numbers import Context
     from loopint.quadrature.paths import Number
 
 ArithmeticName: TypeAlias = Literal["balls", "mpmath"]
 GUARD_BITS = 20
+MARGIN_BITS = 32
 ATTEMPTS = 5
 DIMENSIONS = range(1, 13)
 
@@ -73,8 +74,8 @@ class QuadratureResult:
         of the point.
     reached_digits
         The smallest number of digits, relative to the complex coefficient, that the errors leave.
-        A coefficient that cannot be told from zero is measured against the terms that cancel in
-        it; exact coefficients do not count.
+        A coefficient that cannot be told from zero is measured against the largest of the terms
+        that cancel in it; exact coefficients do not count.
     balls
         Order -> ball, real where theory says that the imaginary part vanishes; empty for mpmath.
     """
@@ -90,7 +91,7 @@ class QuadratureResult:
 
 def integrate_feynman(
     point: OnePoint | TwoPoint,
-    powers: tuple[int, ...],
+    powers: tuple[Power, ...],
     dimension: int,
     orders: tuple[int, int],
     conventions: Conventions,
@@ -98,14 +99,15 @@ def integrate_feynman(
     digits: int = 12,
     arithmetic: ArithmeticName = "balls",
 ) -> QuadratureResult:
-    """Integrate the Feynman-parameter representation of a tadpole or bubble.
+    """Integrate the Feynman-parameter representation of a one- or two-point integral.
 
     Parameters
     ----------
     point
         Kinematics in the same units as `conventions.mu_squared`.
     powers
-        One integer for a `OnePoint`, two positive integers for a `TwoPoint`.
+        One for a `OnePoint`, two for a `TwoPoint`; each is an integer n, or a pair (n, a) meaning
+        n + a eps with a rational a.
     dimension
         d0 in d = d0 - 2 eps, from 1 to 12.
     orders
@@ -118,10 +120,18 @@ def integrate_feynman(
     arithmetic
         "balls": proven enclosures.  "mpmath": mpmath's arithmetic and tanh-sinh rule, estimates.
 
+    Notes
+    -----
+    Orders below the lowest pole that the Gamma functions and the ends of the parameter integral
+    allow are exactly zero.  Where poles cancel for another reason the coefficient is a ball (or a
+    value with an error) that contains zero.
+
     Raises
     ------
     UnsupportedIntegralError
-        If a power of a bubble is below 1, or the parameter integral diverges at eps = 0.
+        If a power of a two-point integral is an integer below 1, for every eps.
+    UnregulatedError
+        If a divergence of the integral is there for every eps.
     InputError
         For an unknown arithmetic or malformed powers, dimension, orders or digits.
 
@@ -135,55 +145,28 @@ def integrate_feynman(
     '2.0'
     """
     orders = check_orders(orders)
-    _check(point, powers, dimension, digits)
-    if arithmetic == "balls":
-        if _is_zero(point, powers):
-            return _exact_zeros(orders, "balls", digits)
-        return _with_balls(_Task(point, powers, dimension, orders, conventions), digits)
-    if arithmetic == "mpmath":
-        if _is_zero(point, powers):
-            return _exact_zeros(orders, "mpmath", digits)
-        return _with_mpmath(_Task(point, powers, dimension, orders, conventions), digits)
-    raise InputError(f"arithmetic = {arithmetic!r} is unknown; accepted: 'balls' or 'mpmath'")
+    task = Representation(point, _parse(point, powers), dimension, orders, conventions)
+    _check(task, digits)
+    if arithmetic not in ("balls", "mpmath"):
+        raise InputError(f"arithmetic = {arithmetic!r} is unknown; accepted: 'balls' or 'mpmath'")
+    if task.is_zero:
+        return _exact_zeros(orders, arithmetic, digits)
+    task.check_existence()
+    return _with_balls(task, digits) if arithmetic == "balls" else _with_mpmath(task, digits)
 
 
-def _check(
-    point: OnePoint | TwoPoint, powers: tuple[int, ...], dimension: int, digits: int
-) -> None:
+def _parse(point: OnePoint | TwoPoint, powers: tuple[Power, ...]) -> tuple[EpsilonLinear, ...]:
     expected = 1 if isinstance(point, OnePoint) else 2
-    if len(powers) != expected or any(type(n) is not int for n in powers):
-        raise InputError(f"powers = {powers!r}; accepted: {expected} integer(s) for this point")
-    if type(dimension) is not int or dimension not in DIMENSIONS:
-        raise InputError(f"dimension = {dimension!r}; accepted: an integer from 1 to 12")
+    if not isinstance(powers, tuple | list) or len(powers) != expected:
+        raise InputError(f"powers = {powers!r}; accepted: {expected} power(s) for this point")
+    return tuple(parse_power(power) for power in powers)
+
+
+def _check(task: Representation, digits: int) -> None:
+    if type(task.dimension) is not int or task.dimension not in DIMENSIONS:
+        raise InputError(f"dimension = {task.dimension!r}; accepted: an integer from 1 to 12")
     if type(digits) is not int or digits < 1:
         raise InputError(f"digits = {digits!r}; accepted: an integer of at least 1")
-    if isinstance(point, TwoPoint) and point.region is not Region.SCALELESS:
-        _check_convergence(point, (powers[0], powers[1]), dimension)
-
-
-def _check_convergence(point: TwoPoint, powers: tuple[int, int], dimension: int) -> None:
-    n1, n2 = powers
-    if min(powers) < 1:
-        raise UnsupportedIntegralError(
-            f"powers = {powers} have no Feynman-parameter integral; accepted: powers of at least 1"
-        )
-    exponent = fmpq(dimension, 2) - n1 - n2
-    at_0, at_1, inside = zero_orders(resolve_on_shell(point))
-    # The weight at x = 0 (where Q = m2^2) is x^(n1-1), at x = 1 (Q = m1^2) it is (1-x)^(n2-1).
-    places = ((at_0, n1, "m2 = 0"), (at_1, n2, "m1 = 0"), (inside, 1, "the threshold"))
-    for order, weight, place in places:
-        if order and order * exponent + weight <= 0:
-            raise UnsupportedIntegralError(
-                f"powers = {powers} in dimension {dimension}: the Feynman-parameter integral "
-                f"diverges at eps = 0 because of {place}; accepted: powers and a dimension for "
-                "which it converges"
-            )
-
-
-def _is_zero(point: OnePoint | TwoPoint, powers: tuple[int, ...]) -> bool:
-    if isinstance(point, OnePoint):
-        return point.m_squared.is_zero or powers[0] <= 0
-    return point.region is Region.SCALELESS
 
 
 def _exact_zeros(
@@ -201,49 +184,19 @@ def _exact_zeros(
     )
 
 
-@dataclass(frozen=True, slots=True)
-class _Task:
-    """One integral at one point, in the form scale^exponent * prefactor * sum (-eps)^k moment_k."""
-
-    point: OnePoint | TwoPoint
-    powers: tuple[int, ...]
-    dimension: int
-    orders: tuple[int, int]
-    conventions: Conventions
-
-    @property
-    def exponent(self) -> fmpq:
-        """d0/2 - N, the power of Q at eps = 0."""
-        return fmpq(self.dimension, 2) - sum(self.powers)
-
-    @property
-    def lowest(self) -> int:
-        """The lowest order that can be different from zero."""
-        return -pole_order(-self.exponent)
-
-    @property
-    def terms(self) -> int:
-        """How many coefficients of each factor are needed."""
-        return max(self.orders[1] - self.lowest + 1, 0)
-
-    @property
-    def sign(self) -> int:
-        return self.conventions.propagator_sign.sign(sum(self.powers))
-
-
-def _with_balls(task: _Task, digits: int) -> QuadratureResult:
+def _with_balls(task: Representation, digits: int) -> QuadratureResult:
     needed = bits_for_digits(digits)
     bits = round_up_to_word(needed + GUARD_BITS)
     found: dict[int, Ball] = {}
     reached = -1
-    for attempt in range(ATTEMPTS):
+    for _ in range(ATTEMPTS):
         with working_precision(bits):
             try:
                 prefactor, moments = _ball_factors(task)
             except MorePrecisionNeeded:
                 bits *= 2
                 continue
-            found, accuracy = _combine_balls(task, prefactor, moments, trust_zero=attempt >= 2)
+            found, accuracy = _combine_balls(task, prefactor, moments, needed=needed)
         reached = digits if accuracy is None else floor((accuracy - 4) / BITS_PER_DIGIT)
         if reached >= digits:
             break
@@ -260,13 +213,13 @@ def _with_balls(task: _Task, digits: int) -> QuadratureResult:
     return QuadratureResult(task.orders, "balls", True, values, errors, max(reached, 0), found)
 
 
-def _ball_factors(task: _Task) -> tuple[list[Ball], list[Ball]]:
-    """Return the coefficients of the prefactor and (-1)^k moment_k at the working precision."""
+def _ball_factors(task: Representation) -> tuple[list[Ball], list[Ball]]:
+    """Return the coefficients of the prefactor and of the integral at the working precision."""
     point, exponent, terms = task.point, task.exponent, task.terms
     if not terms:
         return [], []
     gammas: Sequence[Ball] = scalar_prefactor(
-        task.conventions.measure, task.dimension, -exponent, task.powers, terms
+        task.conventions.measure, task.dimension, task.gamma, task.powers, terms
     )
     scale: ExactComplex
     if isinstance(point, OnePoint):
@@ -274,27 +227,34 @@ def _ball_factors(task: _Task) -> tuple[list[Ball], list[Ball]]:
         moments: list[Ball] = [arb(1), *([arb(0)] * (terms - 1))]
     else:
         scale = ExactComplex(normalisation(point))
-        path = build_path(point.scaled(1 / scale.re), balls.BALLS)
-        n1, n2 = task.powers
-        moments = balls.integrate(path, balls.Integrand((n1, n2), exponent, terms))
-        known = _exact_moment(point.scaled(1 / scale.re), (n1, n2), exponent)
+        scaled = point.scaled(1 / scale.re)
+        moments = balls.integrate(build_path(scaled, balls.BALLS), task.integrand)
+        known = _exact_moment(scaled, task.powers, exponent.constant)
         if known is not None:
             moments[0] = known.ball()
-    logarithm = scale.scaled(1 / task.conventions.mu_squared).ball().log()
-    powers: list[Ball] = [task.sign * (scale.ball().log() * exponent).exp()]
+    mu = task.conventions.mu_squared
+    # (scale)^(d/2-nu) (mu^2)^eps; the logarithm of scale/mu^2 vanishes exactly where it should.
+    rate = scale.scaled(1 / mu).ball().log() * exponent.rate
+    if exponent.rate != -1 and mu != 1:
+        rate = rate + arb(mu).log() * (1 + exponent.rate)
+    if task.phase_rate != 0:
+        rate = rate + acb(0, -arb.pi() * task.phase_rate)
+    powers: list[Ball] = [task.sign * (scale.ball().log() * exponent.constant).exp()]
     for k in range(1, terms):
-        powers.append(powers[-1] * -logarithm / k)
-    prefactor = [_product(gammas, powers, n) for n in range(terms)]
-    return prefactor, [-m if k % 2 else m for k, m in enumerate(moments)]
+        powers.append(powers[-1] * rate / k)
+    return [_product(gammas, powers, n) for n in range(terms)], moments
 
 
-def _exact_moment(point: TwoPoint, powers: tuple[int, int], exponent: fmpq) -> ExactComplex | None:
+def _exact_moment(
+    point: TwoPoint, powers: tuple[EpsilonLinear, ...], exponent: fmpq
+) -> ExactComplex | None:
     """Return Int x^(n1-1) (1-x)^(n2-1) Q^exponent dx if that is a polynomial in rationals.
 
     The coefficient of the ultraviolet pole is then exact, also when it vanishes.
     """
     point = resolve_on_shell(point)
-    if exponent.q != 1 or exponent < 0 or (exponent > 0 and point.snapped):
+    n1, n2 = (int(power.constant.p) for power in powers)
+    if exponent.q != 1 or exponent < 0 or (exponent > 0 and point.snapped) or min(n1, n2) < 1:
         return None
     p, m1, m2 = ExactComplex(point.p_squared), point.m1_squared, point.m2_squared
     quadratic = (m2, m1 - m2 - p, p)
@@ -305,7 +265,6 @@ def _exact_moment(point: TwoPoint, powers: tuple[int, int], exponent: fmpq) -> E
             for j, q in enumerate(quadratic):
                 longer[i + j] = longer[i + j] + c * q
         polynomial = longer
-    n1, n2 = powers
     total = ExactComplex(fmpq(0))
     for j, c in enumerate(polynomial):  # Euler's beta integral
         total += c.scaled(
@@ -319,9 +278,13 @@ def _product(a: Sequence[Number], b: Sequence[Number], n: int) -> Number:
 
 
 def _combine_balls(
-    task: _Task, prefactor: list[Ball], moments: list[Ball], *, trust_zero: bool
+    task: Representation, prefactor: list[Ball], moments: list[Ball], *, needed: int
 ) -> tuple[dict[int, Ball], int | None]:
-    """Return the coefficients and the smallest relative accuracy in bits (None: all exact)."""
+    """Return the coefficients and the smallest relative accuracy in bits (None: all exact).
+
+    A coefficient counts as zero if it is below the terms that cancel in it by more than twice
+    the bits needed.
+    """
     found: dict[int, Ball] = {}
     worst: int | None = None
     for order in range(task.orders[0], task.orders[1] + 1):
@@ -334,20 +297,24 @@ def _combine_balls(
         if bits is None:
             continue
         if ball.contains(0):
-            size = sum((abs(prefactor[j] * moments[n - j]) for j in range(n + 1)), arb(0))
-            ratio = abs(ball).upper() / size
-            settled = trust_zero and ratio.is_finite() and ratio > 0
-            bits = floor(-float(ratio.log()) / log(2)) if settled else 0
+            ratio = abs(ball).upper() / (_largest(prefactor) * _largest(moments))
+            bits = floor(-float(ratio.log()) / log(2)) if ratio.is_finite() and ratio > 0 else 0
+            if bits < 2 * needed + MARGIN_BITS:
+                bits = 0
         worst = bits if worst is None else min(worst, bits)
     return found, worst
 
 
-def _with_mpmath(task: _Task, digits: int) -> QuadratureResult:
+def _largest(values: list[Ball]) -> arb:
+    return max((abs(value).upper() for value in values), key=float)
+
+
+def _with_mpmath(task: Representation, digits: int) -> QuadratureResult:
     values: dict[int, mpmath.mpc] = {}
     errors: dict[int, mpmath.mpf] = {}
     reached = 0
     for attempt, work_digits in enumerate((digits, 2 * digits + 5)):
-        ctx = mpmath_arithmetic.context(work_digits)
+        ctx = mpmath_numbers.context(work_digits)
         values, errors, reached = _mpmath_coefficients(task, ctx, digits, trust_zero=attempt > 0)
         if reached >= digits:
             break
@@ -355,7 +322,7 @@ def _with_mpmath(task: _Task, digits: int) -> QuadratureResult:
 
 
 def _mpmath_coefficients(
-    task: _Task, ctx: mpmath_arithmetic.Context, digits: int, *, trust_zero: bool
+    task: Representation, ctx: Context, digits: int, *, trust_zero: bool
 ) -> tuple[dict[int, mpmath.mpc], dict[int, mpmath.mpf], int]:
     """Return values, error estimates and the digits they leave."""
     prefactor, moments = _mpmath_factors(task, ctx)
@@ -368,7 +335,7 @@ def _mpmath_coefficients(
             continue
         value = sum(prefactor[j] * moments[n - j].value for j in range(n + 1))
         size = sum(abs(prefactor[j]) * moments[n - j].size for j in range(n + 1))
-        error = size * ctx.eps * mpmath_arithmetic.ROUNDING
+        error = size * ctx.eps * mpmath_numbers.ROUNDING
         error += sum(abs(prefactor[j]) * moments[n - j].error for j in range(n + 1))
         values[order] = mpmath.mp.make_mpc(ctx.mpc(value)._mpc_)
         errors[order] = mpmath.mp.make_mpf(ctx.mpf(error)._mpf_)
@@ -381,14 +348,14 @@ def _mpmath_coefficients(
 
 
 def _mpmath_factors(
-    task: _Task, ctx: mpmath_arithmetic.Context
-) -> tuple[list[Number], list[mpmath_arithmetic.Estimate]]:
+    task: Representation, ctx: Context
+) -> tuple[list[Number], list[mpmath_numbers.Estimate]]:
     point, exponent, terms = task.point, task.exponent, task.terms
-    estimate = mpmath_arithmetic.Estimate
+    estimate, real, exact = mpmath_numbers.Estimate, mpmath_numbers.real, mpmath_numbers.exact
     if not terms:
         return [], []
-    gammas = mpmath_arithmetic.scalar_prefactor(
-        ctx, task.conventions.measure, task.dimension, -exponent, task.powers, terms=terms
+    gammas = mpmath_prefactor.scalar_prefactor(
+        ctx, task.conventions.measure, task.dimension, task.gamma, task.powers, terms=terms
     )
     scale: ExactComplex
     if isinstance(point, OnePoint):
@@ -397,17 +364,14 @@ def _mpmath_factors(
         moments = [estimate(one, zero, one), *([estimate(zero, zero, zero)] * (terms - 1))]
     else:
         scale = ExactComplex(normalisation(point))
-        path = build_path(point.scaled(1 / scale.re), mpmath_arithmetic.numbers(ctx))
-        n1, n2 = task.powers
-        moments = mpmath_arithmetic.integrate(ctx, path, (n1, n2), exponent, terms)
-    in_units = mpmath_arithmetic.exact(ctx, scale.scaled(1 / task.conventions.mu_squared))
-    rate = -ctx.log(in_units)
-    log_scale = ctx.log(mpmath_arithmetic.exact(ctx, scale))
-    powers = [task.sign * ctx.exp(mpmath_arithmetic.real(ctx, exponent) * log_scale)]
+        path = build_path(point.scaled(1 / scale.re), mpmath_numbers.numbers(ctx))
+        moments = mpmath_arithmetic.integrate(ctx, path, task.integrand)
+    mu = task.conventions.mu_squared
+    rate = ctx.log(exact(ctx, scale.scaled(1 / mu))) * real(ctx, exponent.rate)
+    rate += ctx.log(real(ctx, mu)) * real(ctx, 1 + exponent.rate)
+    if task.phase_rate != 0:
+        rate -= ctx.j * ctx.pi * real(ctx, task.phase_rate)
+    powers = [task.sign * ctx.exp(real(ctx, exponent.constant) * ctx.log(exact(ctx, scale)))]
     for k in range(1, terms):
         powers.append(powers[-1] * rate / k)
-    prefactor = [_product(gammas, powers, n) for n in range(terms)]
-    alternating = [
-        estimate(-m.value, m.error, m.size) if k % 2 else m for k, m in enumerate(moments)
-    ]
-    return prefactor, alternating
+    return [_product(gammas, powers, n) for n in range(terms)], moments

@@ -25,6 +25,7 @@ from flint import fmpq
 
 from loopint.core.kinematics import Region, TwoPoint, kallen
 from loopint.core.numbers import ZERO, ExactComplex
+from loopint.quadrature.exponents import Place
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -79,6 +80,13 @@ class Leg:
     quadratic: tuple[Number, Number, Number]
     zeros: tuple[Number, ...]
     zero_order: int
+
+    @property
+    def place(self) -> Place:
+        """Where the anchor is."""
+        if self.anchor == 0:
+            return Place.START
+        return Place.END if self.co_anchor == 0 else Place.INSIDE
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,61 +1,75 @@
 """Gamma functions, measure and scales in front of the Feynman integral, from FLINT's power series.
 
-FLINT expands Gamma(a + eps) and its reciprocal itself, poles included; nothing here is shared with
-the prefactors of the closed forms.
+FLINT expands Gamma(a + b eps) and its reciprocal itself, poles included; nothing here is shared
+with the prefactors of the closed forms.
 """
 
 from __future__ import annotations
 
 from functools import lru_cache
-from math import factorial
+from typing import TYPE_CHECKING
 
-from flint import arb, arb_series, fmpq
+from flint import arb, arb_series
 
 from loopint.core.conventions import Measure
 from loopint.core.precision import current_bits, series_length
+from loopint.quadrature.exponents import gamma_pole
+
+if TYPE_CHECKING:
+    from loopint.core.epsilon_linear import EpsilonLinear
 
 
-def pole_order(a: fmpq) -> int:
-    """Return 1 if Gamma(a + eps) has a pole at eps = 0, else 0."""
-    return 1 if a.q == 1 and a <= 0 else 0
+def lowest_order(gamma: EpsilonLinear, powers: tuple[EpsilonLinear, ...]) -> int:
+    """Return the lowest order in eps of Gamma(gamma) / prod Gamma(power)."""
+    return sum(gamma_pole(power) for power in powers) - gamma_pole(gamma)
 
 
 def scalar_prefactor(
-    measure: Measure, dimension: int, a: fmpq, powers: tuple[int, ...], terms: int
+    measure: Measure,
+    dimension: int,
+    gamma: EpsilonLinear,
+    powers: tuple[EpsilonLinear, ...],
+    terms: int,
 ) -> list[arb]:
-    """Expand N(eps) Gamma(a + eps) / prod Gamma(n) from order -`pole_order(a)`.
+    """Expand N(eps) Gamma(gamma) / prod Gamma(power) from its lowest order.
 
     Returns `terms` coefficients at the working precision.  For `Measure.TWO_PI` the factor
     (4 pi)^(-d/2) is included.
     """
-    return list(_scalar_prefactor(measure, dimension, a, powers, terms, bits=current_bits()))
+    return list(_scalar_prefactor(measure, dimension, gamma, powers, terms, bits=current_bits()))
 
 
 @lru_cache(maxsize=256)
 def _scalar_prefactor(
     measure: Measure,
     dimension: int,
-    a: fmpq,
-    powers: tuple[int, ...],
+    gamma: EpsilonLinear,
+    powers: tuple[EpsilonLinear, ...],
     terms: int,
     *,
     bits: int,  # noqa: ARG001 - the working precision is part of the cache key
 ) -> tuple[arb, ...]:
     with series_length(terms + 1):
-        divisor = 1
-        for n in powers:
-            divisor *= factorial(n - 1)
-        total = _gamma(a, terms) * _measure(measure, dimension) / divisor
+        total = _measure(measure, dimension)
+        if gamma_pole(gamma):
+            total = total / _reciprocal_gamma(gamma, terms)
+        else:
+            total = total * _argument(gamma).gamma()
+        for power in powers:
+            total = total * _reciprocal_gamma(power, terms)
         return tuple(total[k] for k in range(terms))
 
 
-def _gamma(a: fmpq, terms: int) -> arb_series:
-    """Expand eps^pole_order Gamma(a + eps)."""
-    argument = arb_series([arb(a), 1])
-    if not pole_order(a):
-        return argument.gamma()
-    reciprocal = argument.rgamma()  # starts with an exact zero
-    return 1 / arb_series([reciprocal[k + 1] for k in range(terms)])
+def _argument(exponent: EpsilonLinear) -> arb_series:
+    return arb_series([arb(exponent.constant), arb(exponent.rate)])
+
+
+def _reciprocal_gamma(exponent: EpsilonLinear, terms: int) -> arb_series:
+    """Expand 1/Gamma(exponent), divided by eps if it vanishes at eps = 0."""
+    reciprocal = _argument(exponent).rgamma()
+    if not gamma_pole(exponent):
+        return reciprocal
+    return arb_series([reciprocal[k + 1] for k in range(terms)])  # starts with an exact zero
 
 
 def _measure(measure: Measure, dimension: int) -> arb_series:

@@ -1,0 +1,17 @@
+"""Integrals over arrays of float64 points: vectorised, with a proven error bound per value.
+
+Rounding model
+--------------
+IEEE-754 binary64, round to nearest: +, -, *, / and sqrt are correctly rounded, so that
+fl(x op y) = (x op y)(1+d), |d| <= u = 2^-53, barring overflow and underflow.  A product of complex
+numbers is within sqrt(5) u of the exact one (Brent, Percival, Zimmermann, Math. Comp. 76 (2007)
+1469), with or without fused multiply-add.  NumPy's log, log1p, arctan and arctan2 are assumed to be
+within 4 ulp; a test compares them with ball arithmetic.
+
+Points are scaled by an exact power of two so that the largest of |p^2|, |m1^2|, |m2^2| is near 1;
+points with a nonzero one below 2^-200 of it are left to ball arithmetic, so nothing underflows.
+
+Errors are carried in units of u to first order; the products of two errors that this drops are
+covered by 1 % on the final bound, as every relative error that is used is below 2^-20.
+A point whose bound misses the tolerance is evaluated in ball arithmetic.
+"""

@@ -1,0 +1,1 @@
+"""Closed forms of the integral families as sympy expressions, and their printing."""

@@ -1,0 +1,68 @@
+"""How the printed formulas name things."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from loopint.core.conventions import Measure, PropagatorSign
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+TEXT_NAMES = {
+    "kallen": "lambda",
+    "A_1": "A1",
+    "A_2": "A2",
+    "l_1": "l1",
+    "l_2": "l2",
+    **{f"L_{k}": f"L{k}" for k in range(1, 60)},
+}
+LATEX_NAMES = {
+    "eps": r"\varepsilon",
+    "kallen": r"\lambda",
+    "mu": r"\mu",
+    "m1": "m_{1}",
+    "m2": "m_{2}",
+    "mh": r"m_{h}",
+    "ml": r"m_{l}",
+    **{f"{stem}{tag}": f"{stem}_{{{tag}}}" for stem in "tu" for tag in ("1", "2", "h", "l", "0")},
+    "phi": r"\varphi",
+    "phi1": r"\varphi_{1}",
+    "phi2": r"\varphi_{2}",
+}
+LETTERS = {"tadpole": "A", "bubble": "B"}
+HEADINGS = {
+    "general": "general kinematics",
+    "equal_mass": "equal masses",
+    "one_massless": "one massless line",
+    "both_massless": "both lines massless",
+    "zero_momentum": "p^2 = 0",
+    "zero_momentum_equal_mass": "p^2 = 0, equal masses",
+    "zero_momentum_one_massless": "p^2 = 0, one massless line",
+    "threshold": "at threshold",
+    "pseudothreshold": "at pseudothreshold",
+    "on_shell": "on shell with a massless line",
+}
+MEASURES = {
+    Measure.MSBAR: "measure msbar: N(eps) = exp(gamma_E eps)",
+    Measure.PLAIN: "measure plain: N(eps) = 1",
+    Measure.GAMMA: "measure gamma: N(eps) = 1/Gamma(1+eps)",
+    Measure.R_GAMMA: "measure r_gamma: N(eps) = Gamma(1-2 eps)/(Gamma(1+eps) Gamma(1-eps)^2)",
+    Measure.TWO_PI: "measure two_pi: N(eps) = (4 pi)^(-d/2)",
+}
+
+
+def integral_definition(family: str, powers: Sequence[int], sign: PropagatorSign) -> str:
+    """Write the definition of the integral."""
+    momenta = ("q^2", "(q+p)^2")
+    masses = ("m^2",) if family == "tadpole" else ("m1^2", "m2^2")
+    factors = []
+    for momentum, mass, power in zip(momenta, masses, powers, strict=False):
+        if sign is PropagatorSign.MINKOWSKI:
+            factor = f"({momentum} - {mass} + i0)"
+        else:
+            factor = f"({mass} - {momentum} - i0)"
+        exponent = "" if power == 1 else f"^{power}" if power > 0 else f"^({power})"
+        factors.append(factor + exponent)
+    name = LETTERS[family]
+    return f"{name} = N(eps) (mu^2)^eps Int d^dq/(i pi^(d/2)) 1/[{' '.join(factors)}]"

@@ -1,0 +1,147 @@
+"""The whole pipeline, Parquet to Parquet: rows per second and memory, by engine and workers.
+
+    python -m tests.benchmarks.pipeline 100000 --digits 15 --json result.json
+
+Each run is `loopint run` in a process of its own, start-up included.  The last line is what plain
+pyarrow takes to read the points and to read and write the resulting table again: no evaluation, no
+files in between.  Memory is the peak of the largest process, workers included.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import os
+import subprocess
+import sys
+import tempfile
+import time
+from pathlib import Path
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+CONFIG = """
+[points]
+file = "{points}"
+[[integral]]
+name = "self_energy"
+family = "bubble"
+p_squared = "s"
+m1_squared = "m1_squared"
+m2_squared = "m2_squared"
+[accuracy]
+digits = {digits}
+[cross_check]
+fraction = {fraction}
+[output]
+directory = "{out}"
+layout = "wide"
+[execution]
+engine = "{engine}"
+workers = {workers}
+"""
+BATCH = 1_000_000
+
+
+def write_points(path: Path, rows: int) -> None:
+    """Write masses between 0.1 and 2 and p^2 on both sides of the threshold."""
+    source = np.random.default_rng(7)
+    names = ("s", "m1_squared", "m2_squared")
+    with pq.ParquetWriter(path, pa.schema([(name, pa.float64()) for name in names])) as writer:
+        for start in range(0, rows, BATCH):
+            count = min(BATCH, rows - start)
+            first, second = (source.uniform(0.1, 2, count) ** 2 for _ in range(2))
+            s = source.uniform(-2, 3, count) * (np.sqrt(first) + np.sqrt(second)) ** 2
+            writer.write_table(pa.table([s, first, second], names=names))
+
+
+def run(directory: Path, engine: str, workers: int, digits: int, fraction: str) -> dict:
+    """Run once and return seconds, rates and memory."""
+    name = f"{engine}-{workers}"
+    config = directory / f"{name}.toml"
+    out = directory / name
+    config.write_text(
+        CONFIG.format(
+            points=directory / "points.parquet",
+            out=out,
+            engine=engine,
+            workers=workers,
+            digits=digits,
+            fraction=fraction,
+        )
+    )
+    started = time.perf_counter()
+    process = subprocess.Popen(
+        [sys.executable, "-m", "loopint.cli", "run", str(config)], stdout=subprocess.DEVNULL
+    )
+    _, status, usage = os.wait4(process.pid, 0)  # with the largest of its workers
+    seconds = time.perf_counter() - started
+    if status:
+        raise SystemExit(f"{name}: exit code {os.waitstatus_to_exitcode(status)}")
+    summary = json.loads((out / "summary.json").read_text())
+    return {
+        "engine": engine,
+        "workers": workers,
+        "rows": summary["rows_in"],
+        "seconds": round(seconds, 2),
+        "rows_per_second": round(summary["rows_in"] / seconds),
+        "peak_mib": round(usage.ru_maxrss / 1024),
+        "parts": len(list((out / "table").iterdir())),
+    }
+
+
+def plain_pyarrow(directory: Path, table: Path) -> float:
+    """Return the seconds that reading the points and copying the result take, in one process."""
+    started = time.perf_counter()
+    for _ in pq.ParquetFile(directory / "points.parquet").iter_batches():
+        pass
+    for part in sorted(table.iterdir()):
+        pq.write_table(pq.read_table(part), directory / "copy.parquet", compression="zstd")
+    return time.perf_counter() - started
+
+
+def same_bytes(first: Path, second: Path) -> bool:
+    """Whether two runs gave the same table."""
+    names = [sorted(path.name for path in one.iterdir()) for one in (first, second)]
+    return names[0] == names[1] and all(
+        (first / name).read_bytes() == (second / name).read_bytes() for name in names[0]
+    )
+
+
+def main() -> None:
+    parser = argparse.ArgumentParser(description=__doc__.splitlines()[0])
+    parser.add_argument("rows", type=int, nargs="?", default=10_000)
+    parser.add_argument("--digits", type=int, default=15)
+    parser.add_argument("--cross-check", default='"none"', help="fraction, as in a config")
+    parser.add_argument("--runs", default="local:1,local:2,dask:1,dask:2", help="engine:workers")
+    parser.add_argument("--json", type=Path, help="write the figures to this file")
+    options = parser.parse_args()
+    with tempfile.TemporaryDirectory() as name:
+        directory = Path(name)
+        write_points(directory / "points.parquet", options.rows)
+        print(f"{options.rows} rows, {options.digits} digits, wide layout, orders -1..0")
+        print("engine  workers  seconds    rows/s  speed-up  peak MiB  parts  same bytes")
+        found = []
+        for engine, workers in (one.split(":") for one in options.runs.split(",")):
+            one = run(directory, engine, int(workers), options.digits, options.cross_check)
+            found.append(one)
+            tables = [directory / f"{o['engine']}-{o['workers']}" / "table" for o in found]
+            one["speed_up"] = round(found[0]["seconds"] / one["seconds"], 2)
+            one["same_bytes"] = same_bytes(tables[0], tables[-1])
+            print(
+                f"{engine:6}  {workers:>7}  {one['seconds']:7.2f}  {one['rows_per_second']:8}"
+                f"  {one['speed_up']:8}  {one['peak_mib']:8}  {one['parts']:5}"
+                f"  {one['same_bytes']}",
+                flush=True,
+            )
+        seconds = plain_pyarrow(directory, tables[0])
+        print(f"plain pyarrow, reading and writing alone: {seconds:.2f} s")
+    if options.json:
+        result = {"digits": options.digits, "runs": found, "plain_pyarrow_seconds": seconds}
+        options.json.write_text(json.dumps(result, indent=2) + "\n")
+
+
+if __name__ == "__main__":
+    main()
