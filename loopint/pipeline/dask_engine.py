@@ -198,5 +198,6 @@ def _do(versions: dict[str, str], pickled: bytes, task: Any) -> Any:  # noqa: AN
 
 @lru_cache(maxsize=1)
 def _made(pickled: bytes) -> Callable[[Any], Any]:
+    # made by the driver of this run and sent over dask's own connection, never read from a file
     function: Callable[[Any], Any] = pickle.loads(pickled)()
     return function
