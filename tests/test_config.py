@@ -283,7 +283,7 @@ MISTAKES = [
     ("powers = [1, 1]", "power = [1, 1]", '[[integral]] "alder_cedar" power is unknown; did you '),
     ("width2 =", "Width2 =", '[[integral]] "alder_cedar" Width2 is unknown; did you mean width'),
     ("workers = 3", "threads = 3", "[execution] threads is unknown; accepted: engine, schedul"),
-    ("[execution]", "[[comparison]]\n[execution]", "comparison is unknown; accepted: title, "),
+    ("[execution]", "[[comparisons]]\n[execution]", "comparisons is unknown; did you mean "),
     ("powers = [2]", 'derivatives = ["p_squared"]', "names out of m_squared"),
     # sections
     ("[conventions]", "[[conventions]]", "conventions = [{...}] is not a section; accepted: [conv"),

@@ -2,36 +2,45 @@
 
 from __future__ import annotations
 
-import json
-import tomllib
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
-from decimal import Decimal, InvalidOperation
+from collections.abc import Mapping
+from dataclasses import replace
+from decimal import Decimal
 from functools import cached_property
 from pathlib import Path
-from typing import Annotated, Any, Literal, NamedTuple, Self, TypeAlias, cast
+from typing import Annotated, Any, Literal, NamedTuple, Self, TypeVar, cast
 
-from pydantic import (
-    BaseModel,
-    BeforeValidator,
-    ConfigDict,
-    Field,
-    PrivateAttr,
-    ValidationError,
-    model_validator,
-)
-from pydantic_core import CoreSchema, core_schema
+from pydantic import BaseModel, Field, PrivateAttr, ValidationError, model_validator
 
 from loopint.core.conventions import Measure, PropagatorSign
 from loopint.core.errors import InputError
 from loopint.integrals.derivatives import check_derivatives
 from loopint.integrals.proof import DEFAULT_MAX_PRECISION_BITS, MAX_DIGITS, MIN_DIGITS
 from loopint.integrals.registry import FAMILIES, Integral
-from loopint.pipeline.errors import ConfigError, unknown_name
+from loopint.pipeline.comparison_config import ComparisonConfig
+from loopint.pipeline.config_messages import explain, read_toml
+from loopint.pipeline.errors import ConfigError
 from loopint.pipeline.expressions import Expression, parse_expression
+from loopint.pipeline.grid_config import GridConfig
+from loopint.pipeline.interpolation_config import InterpolationConfig
+from loopint.pipeline.sections import (
+    REAL,
+    SQUARED,
+    ComplexExpression,
+    ExactNumber,
+    FilePath,
+    ReadBy,
+    Real,
+    Section,
+    Squared,
+    exact_number,
+    expression,
+    plain,
+    toml_text,
+)
 
 __all__ = [
     "AccuracyConfig",
+    "AnyConfig",
     "ConfigError",
     "ConventionsConfig",
     "CrossCheckConfig",
@@ -46,66 +55,7 @@ __all__ = [
 ]
 
 
-def _exact_number(value: object) -> object:
-    """Let an integer stand where a decimal is expected; never a boolean or a binary float."""
-    return Decimal(value) if isinstance(value, int) and not isinstance(value, bool) else value
-
-
-def _path(value: object) -> object:
-    return Path(value) if isinstance(value, str) and value.strip() else value
-
-
-def _expression(value: object) -> Expression:
-    if isinstance(value, Expression):
-        return value
-    if isinstance(value, str):
-        return parse_expression(value)
-    if isinstance(value, int) and not isinstance(value, bool):
-        return parse_expression(value)
-    if isinstance(value, Decimal) and value.is_finite():
-        return parse_expression(str(value))
-    if isinstance(value, list | tuple):
-        raise InputError(f"{_toml(value)} is complex; accepted: a real number or expression")
-    raise ValueError  # the description of the field says what is accepted
-
-
-def _complex_expression(value: object) -> ComplexExpression:
-    if isinstance(value, list | tuple):
-        if len(value) != 2:
-            raise InputError(f"{_toml(value)} has {len(value)} entries; accepted: [re, im]")
-        return _expression(value[0]), _expression(value[1])
-    return _expression(value)
-
-
-@dataclass(frozen=True)
-class _ReadBy:
-    """Tell pydantic that a function alone reads a field, so that it asks nothing of the type."""
-
-    read: Callable[[object], object]
-
-    def __get_pydantic_core_schema__(self, source: Any, handler: object) -> CoreSchema:  # noqa: ANN401
-        return core_schema.no_info_plain_validator_function(self.read)
-
-
-ComplexExpression: TypeAlias = Expression | tuple[Expression, Expression]
-ExactNumber: TypeAlias = Annotated[Decimal, BeforeValidator(_exact_number)]
-FilePath: TypeAlias = Annotated[Path, BeforeValidator(_path)]
-Real: TypeAlias = Annotated[Expression | None, _ReadBy(_expression)]
-Squared: TypeAlias = Annotated[ComplexExpression | None, _ReadBy(_complex_expression)]
-
-REAL = "a number, a column, or arithmetic on columns"
-SQUARED = f"{REAL}; complex: an array [re, im] of these"
-
-
-class _Section(BaseModel):
-    """A part of the config; the description of a field says what it accepts."""
-
-    model_config = ConfigDict(
-        frozen=True, extra="forbid", strict=True, arbitrary_types_allowed=True
-    )
-
-
-class PointsConfig(_Section):
+class PointsConfig(Section):
     """`[points]`: where the kinematic points are."""
 
     file: FilePath = Field(description="the path of a Parquet file or of a directory of them")
@@ -133,7 +83,7 @@ _MASS_KEYS = {
 }
 
 
-class IntegralConfig(_Section):
+class IntegralConfig(Section):
     """`[[integral]]`: one integral, and its kinematics in terms of columns."""
 
     name: str = Field(
@@ -174,10 +124,12 @@ class IntegralConfig(_Section):
             return data
         if set(data) - set(cls.model_fields):
             return data  # the unknown key is the better message
-        given = {key: _plain(data.get(key)) for key in ("dimension", "orders")}
+        given = {key: plain(data.get(key)) for key in ("dimension", "orders")}
         orders = given["orders"] if "orders" in data else (-1, 0)
         if not isinstance(orders, list | tuple):
-            raise InputError(f"orders = {_toml(orders)}; accepted: [lowest, highest], as [-1, 2]")
+            raise InputError(
+                f"orders = {toml_text(orders)}; accepted: [lowest, highest], as [-1, 2]"
+            )
         integral = Integral.parse(
             data["family"],
             data.get("powers"),
@@ -253,7 +205,9 @@ class IntegralConfig(_Section):
 def _derivatives(entries: object, integral: Integral) -> tuple[tuple[str, ...], ...]:
     """Return the derivatives of an integral, each in the standard order of its variables."""
     if not isinstance(entries, list | tuple):
-        raise InputError(f'derivatives = {_toml(entries)}; accepted: an array, as ["p_squared"]')
+        raise InputError(
+            f'derivatives = {toml_text(entries)}; accepted: an array, as ["p_squared"]'
+        )
     found: list[tuple[str, ...]] = []
     for entry in entries:
         names = check_derivatives(entry, FAMILIES[integral.family].variables)
@@ -261,8 +215,8 @@ def _derivatives(entries: object, integral: Integral) -> tuple[tuple[str, ...], 
             raise InputError("derivatives has an empty entry; accepted: one to four variables")
         if names in found:
             raise InputError(
-                f"derivatives has {_toml(entry)} twice; accepted: each derivative once, whatever "
-                "the order of its variables"
+                f"derivatives has {toml_text(entry)} twice; accepted: each derivative once, "
+                "whatever the order of its variables"
             )
         found.append(names)
     return tuple(found)
@@ -271,10 +225,10 @@ def _derivatives(entries: object, integral: Integral) -> tuple[tuple[str, ...], 
 _KINEMATIC_KEYS = ("p_squared", *(key for lines in _MASS_KEYS.values() for k in lines for key in k))
 
 
-class ConventionsConfig(_Section):
+class ConventionsConfig(Section):
     """`[conventions]`: what multiplies the bare integral."""
 
-    mu_squared: Annotated[Expression, _ReadBy(_expression)] = Field(
+    mu_squared: Annotated[Expression, ReadBy(expression)] = Field(
         default=parse_expression(1), description=f"{REAL}, positive"
     )
     propagator_sign: PropagatorSign = Field(
@@ -283,7 +237,7 @@ class ConventionsConfig(_Section):
     measure: Measure = Field(default=Measure.MSBAR, strict=False, description=", ".join(Measure))
 
 
-class AccuracyConfig(_Section):
+class AccuracyConfig(Section):
     """`[accuracy]`: the digits to be proven."""
 
     digits: int = Field(
@@ -306,7 +260,7 @@ class AccuracyConfig(_Section):
     )
 
 
-class CrossCheckConfig(_Section):
+class CrossCheckConfig(Section):
     """`[cross_check]`: how much is integrated again by quadrature."""
 
     fraction: Annotated[Decimal, Field(ge=0, le=1)] | Literal["all", "none"] = Field(
@@ -322,7 +276,7 @@ class CrossCheckConfig(_Section):
     @classmethod
     def _accept_integers(cls, data: object) -> object:
         if isinstance(data, Mapping) and "fraction" in data:
-            return {**data, "fraction": _exact_number(data["fraction"])}
+            return {**data, "fraction": exact_number(data["fraction"])}
         return data
 
     @property
@@ -333,7 +287,7 @@ class CrossCheckConfig(_Section):
         return Decimal(1 if self.fraction == "all" else 0)
 
 
-class OutputConfig(_Section):
+class OutputConfig(Section):
     """`[output]`: where the tables go, and how they look."""
 
     directory: FilePath = Field(description="the path of a directory for this run")
@@ -346,7 +300,7 @@ class OutputConfig(_Section):
     )
 
 
-class ExecutionConfig(_Section):
+class ExecutionConfig(Section):
     """`[execution]`: how the work is spread; never changes a result."""
 
     engine: Literal["local", "dask"] = Field(default="local", description='"local" or "dask"')
@@ -372,8 +326,8 @@ class ExecutionConfig(_Section):
     def _check_scheduler(self) -> Self:
         if self.scheduler is not None and self.engine != "dask":
             raise InputError(
-                f'scheduler = {_toml(self.scheduler)} needs engine = "dask"; accepted: both, or '
-                "no scheduler"
+                f'scheduler = {toml_text(self.scheduler)} needs engine = "dask"; accepted: both, '
+                "or no scheduler"
             )
         if self.scheduler is not None and self.workers is not None:
             raise InputError(
@@ -383,15 +337,15 @@ class ExecutionConfig(_Section):
         return self
 
 
-class RunConfig(_Section):
-    """A whole config, valid in itself; the columns it names are checked against the points."""
+class AnyConfig(Section):
+    """Everything that a config may hold; each command needs some of it."""
 
     title: str = Field(default="", description="a line of text")
-    points: PointsConfig = Field(description="a section [points]")
+    points: PointsConfig | None = Field(default=None, description="a section [points]")
     integrals: tuple[IntegralConfig, ...] = Field(
+        default=(),
         alias="integral",
         strict=False,
-        min_length=1,
         description="one or more sections [[integral]]",
     )
     conventions: ConventionsConfig = Field(
@@ -401,9 +355,22 @@ class RunConfig(_Section):
     cross_check: CrossCheckConfig = Field(
         default=CrossCheckConfig(), description="a section [cross_check]"
     )
-    output: OutputConfig = Field(description="a section [output]")
+    output: OutputConfig | None = Field(default=None, description="a section [output]")
     execution: ExecutionConfig = Field(
         default=ExecutionConfig(), description="a section [execution]"
+    )
+    grid: GridConfig | None = Field(default=None, description="a section [grid]")
+    comparisons: tuple[ComparisonConfig, ...] = Field(
+        default=(),
+        alias="comparison",
+        strict=False,
+        description="one or more sections [[comparison]]",
+    )
+    interpolations: tuple[InterpolationConfig, ...] = Field(
+        default=(),
+        alias="interpolation",
+        strict=False,
+        description="one or more sections [[interpolation]]",
     )
 
     _file: Path | None = PrivateAttr(None)
@@ -429,9 +396,55 @@ class RunConfig(_Section):
         """The start of a message about this config: its file and a colon, if it has one."""
         return f"{self._file}: " if self._file else ""
 
+    def beside(self, path: Path) -> Path:
+        """Return a path, from the current directory or else from the directory of the config."""
+        beside = path if self._file is None else self._file.parent / path
+        return beside if not path.exists() and beside.exists() else path
+
+
+class RunConfig(AnyConfig):
+    """A config for `loopint run`; the columns it names are checked against the points."""
+
+    points: PointsConfig = Field(description="a section [points]")
+    integrals: tuple[IntegralConfig, ...] = Field(
+        alias="integral",
+        strict=False,
+        min_length=1,
+        description="one or more sections [[integral]]",
+    )
+    output: OutputConfig = Field(description="a section [output]")
+
+
+class GridRunConfig(AnyConfig):
+    """A config for `loopint grid`, which writes the file of `[points]`."""
+
+    points: PointsConfig = Field(description="a section [points]")
+    grid: GridConfig = Field(description="a section [grid]")
+
+
+class InterpolationRunConfig(AnyConfig):
+    """A config for `loopint interpolate`, whose columns are the variables of the interpolants."""
+
+    integrals: tuple[IntegralConfig, ...] = Field(
+        alias="integral",
+        strict=False,
+        min_length=1,
+        description="one or more sections [[integral]]",
+    )
+    interpolations: tuple[InterpolationConfig, ...] = Field(
+        alias="interpolation",
+        strict=False,
+        min_length=1,
+        description="one or more sections [[interpolation]]",
+    )
+    output: OutputConfig = Field(description="a section [output]")
+
+
+AnyKind = TypeVar("AnyKind", bound=AnyConfig)
+
 
 def load_config(path: Path) -> RunConfig:
-    """Read and check a config file.
+    """Read and check the config of a run.
 
     The path of the points is relative to the current directory or, if nothing is there, to the
     directory of the config.
@@ -441,15 +454,21 @@ def load_config(path: Path) -> RunConfig:
     ConfigError
         If the file cannot be read, is not TOML, or has an unknown key or an unusable value.
     """
-    raw = _read_toml(path)
-    try:
-        config = RunConfig.model_validate(raw)
-    except ValidationError as error:
-        raise ConfigError(f"{path}: {_sentence(error, raw)}") from None
-    beside = path.parent / config.points.file
-    if not config.points.file.exists() and beside.exists():
-        points = config.points.model_copy(update={"file": beside})
+    config = load_config_as(RunConfig, path)
+    file = config.beside(config.points.file)
+    if file != config.points.file:
+        points = config.points.model_copy(update={"file": file})
         config = config.model_copy(update={"points": points})
+    return config
+
+
+def load_config_as(kind: type[AnyKind], path: Path) -> AnyKind:
+    """Read and check a config for one command; raises `ConfigError`."""
+    raw = read_toml(path)
+    try:
+        config = kind.model_validate(raw)
+    except ValidationError as error:
+        raise ConfigError(f"{path}: {explain(error, raw, kind)}") from None
     config._file = path  # set once, by the only function that knows it
     return config
 
@@ -482,121 +501,3 @@ def _jsonable(value: object) -> Any:  # noqa: ANN401 - JSON
             return str(value)  # also turns the enumerations into plain strings
         case _:
             return value
-
-
-def _read_toml(path: Path) -> dict[str, Any]:
-    accepted = "accepted: a TOML file"
-    try:
-        text = path.read_bytes().decode("utf-8-sig")
-    except FileNotFoundError:
-        raise ConfigError(f"{path} does not exist; {accepted}") from None
-    except IsADirectoryError:
-        raise ConfigError(f"{path} is a directory; {accepted}") from None
-    except UnicodeDecodeError:
-        raise ConfigError(f"{path} is not text in UTF-8; {accepted}") from None
-    except (OSError, ValueError) as error:
-        reason = getattr(error, "strerror", None) or error
-        raise ConfigError(f"{path} cannot be read: {reason}; {accepted}") from None
-    try:
-        return tomllib.loads(text, parse_float=Decimal)
-    except InvalidOperation:
-        raise ConfigError(
-            f"{path} has a number whose exponent is too large; accepted: up to 10^10000"
-        ) from None
-    except (ValueError, RecursionError) as error:
-        reason = str(error).partition(";")[0]
-        raise ConfigError(f"{path} is not valid TOML: {reason}; {accepted}") from None
-
-
-def _sentence(error: ValidationError, raw: Mapping[str, Any]) -> str:
-    """Turn the most telling of pydantic's errors into one plain sentence."""
-    errors = error.errors(include_url=False)
-    # a misspelt key explains why the right one is missing
-    first = min(errors, key=lambda found: found["type"] != "extra_forbidden")
-    model: type[_Section] = RunConfig
-    where, data, loc = "", raw, first["loc"]
-    if loc and loc[0] in _SECTIONS:
-        section, loc = str(loc[0]), loc[1:]
-        if not loc:
-            if first["type"] == "value_error":  # keys that do not fit together
-                return f"{_brackets(section)} {first['ctx']['error']}"
-            return _section_sentence(section, first["type"], raw)
-        model, where, data = _SECTIONS[section], f"[{section}] ", raw[section]
-        if isinstance(loc[0], int):
-            data, loc = raw[section][loc[0]], loc[1:]
-            where = _integral_label(raw[section], data)
-    message = str(first["ctx"]["error"]) if first["type"] == "value_error" else ""
-    if not loc:
-        return f"{where}{message}" if message else f"{where}= {_toml(data)}; {_keys('integral')}"
-    key = str(loc[0])
-    fields = {field.alias or name: field for name, field in model.model_fields.items()}
-    if first["type"] == "extra_forbidden":
-        return f"{where}{key} {unknown_name(key, fields)}"
-    accepted = f"accepted: {fields[key].description}"
-    if first["type"] == "missing":
-        return f"{where}{key} is missing; {accepted}"
-    if message:
-        return f"{where}{key}: {message}"
-    return f"{where}{key} = {_toml(data[key])}; {accepted}"
-
-
-def _section_sentence(section: str, kind: str, raw: Mapping[str, Any]) -> str:
-    """Explain what is wrong with a section as a whole."""
-    brackets = _brackets(section)
-    accepted = _keys(section)
-    if kind == "missing" or raw.get(section) == []:
-        return f"{brackets} is missing; {accepted}"
-    if isinstance(raw.get(section), Mapping):
-        return f"[{section}] is written with single brackets; {accepted}"
-    return f"{section} = {_toml(raw.get(section))} is not a section; {accepted}"
-
-
-def _brackets(section: str) -> str:
-    return "[[integral]]" if section == "integral" else f"[{section}]"
-
-
-def _keys(section: str) -> str:
-    fields = _SECTIONS[section].model_fields
-    return f"accepted: {_brackets(section)} with the keys {', '.join(fields)}"
-
-
-def _integral_label(entries: list[Any], entry: object) -> str:
-    name = entry.get("name") if isinstance(entry, Mapping) else None
-    if isinstance(name, str):
-        return f"[[integral]] {_toml(name)} "
-    place = next(index for index, other in enumerate(entries) if other is entry)
-    return f"[[integral]] number {place + 1} "
-
-
-_SECTIONS: dict[str, type[_Section]] = {
-    "points": PointsConfig,
-    "integral": IntegralConfig,
-    "conventions": ConventionsConfig,
-    "accuracy": AccuracyConfig,
-    "cross_check": CrossCheckConfig,
-    "output": OutputConfig,
-    "execution": ExecutionConfig,
-}
-
-
-def _plain(value: object) -> object:
-    """Return TOML data with floats in place of decimals, for messages that show the value."""
-    if isinstance(value, list):
-        return [_plain(item) for item in value]
-    return float(value) if isinstance(value, Decimal) else value
-
-
-def _toml(value: object) -> str:
-    """Return a value as it would be written in TOML, shortened."""
-    text: str
-    if isinstance(value, list | tuple):
-        text = f"[{', '.join(_toml(item) for item in value)}]"
-    elif isinstance(value, Mapping):
-        text = "{...}"
-    elif isinstance(value, str):
-        text = json.dumps(value, ensure_ascii=False)
-    elif isinstance(value, bool):
-        text = "true" if value else "false"
-    else:
-        text = str(value)
-    return text if len(text) <= 60 else text[:57] + "..."

@@ -24,6 +24,8 @@ WITHOUT_EFFECT = {
     "execution": ("engine", "workers", "scheduler", "chunk_rows"),  # chunk_rows: as used
 }
 
+NOT_OF_THE_RUN = ("title", "grid", "comparison", "interpolation")  # read by other commands
+
 
 def package_version() -> str:
     """Return the version of the installed package."""
@@ -41,7 +43,8 @@ def plan_hash(config: RunConfig, input_hashes: Mapping[str, str], chunk_rows: in
     numbers rest on.
     """
     relevant = deepcopy(config_as_dict(config))
-    relevant.pop("title", None)
+    for name in NOT_OF_THE_RUN:
+        relevant.pop(name, None)
     for section, names in WITHOUT_EFFECT.items():
         for name in names:
             relevant.get(section, {}).pop(name, None)
