@@ -330,3 +330,21 @@ def test_results_do_not_depend_on_what_was_computed_before() -> None:
     for k in range(-1, 3):
         assert str(first.series[k]) == str(second.series[k])
     assert isinstance(first.series[-1], arb)
+
+
+@pytest.mark.parametrize(
+    ("series", "order"),
+    [
+        # psi(1/2) = -gamma_E - 2 log 2 (DLMF 5.4.13): the eps^1 term of Gamma(1/2+eps) 4^eps
+        (loopint.tadpole("1/4", 4, dimension=7, orders=(-1, 3)), 1),
+        (loopint.bubble(0, "1/4", "1/4", (3, 1), dimension=7, orders=(-1, 3)), 1),
+        (loopint.tadpole(1, 4, dimension=7, mu_squared=4, orders=(-1, 3)), 1),
+    ],
+    ids=["tadpole", "equal masses at p^2 = 0", "scale"],
+)
+def test_a_coefficient_that_vanishes_by_accident_is_exactly_zero(
+    series: LaurentSeries, order: int
+) -> None:
+    assert series.status == "ok"
+    assert series[order] == 0 and series.bounds[order] == 0
+    assert series[order - 1] != 0 and series[order + 1] != 0

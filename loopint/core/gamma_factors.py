@@ -17,7 +17,7 @@ numbers: the pole order is known, and coefficients that vanish are exact zeros.
 from __future__ import annotations
 
 from collections import Counter
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 
 from flint import arb, fmpq
@@ -130,6 +130,20 @@ class EpsilonFactor:
 
     def __truediv__(self, other: EpsilonFactor) -> EpsilonFactor:
         return self * other.inverse()
+
+    def split_two(self) -> tuple[EpsilonFactor, int]:
+        """Return the factor without 2^(k eps), and the integer k.
+
+        2^(k eps) (m^2)^(-eps) = (m^2/2^k)^(-eps) has an exact base, so that a logarithm which
+        vanishes does so exactly.
+
+        Examples
+        --------
+        >>> EpsilonFactor.gamma(fmpq(1, 2), 1).split_two()[1]
+        -2
+        """
+        whole = int(self.log_two.floor())
+        return replace(self, log_two=self.log_two - whole), whole
 
     def series(self, terms: int) -> BallSeries:
         """Expand to `terms` orders, starting at `lowest_order`, at the working precision."""

@@ -85,6 +85,12 @@ class FeynmanMoment:
         return self._expanded(self.prefactor)
 
     @cached_property
+    def without_two(self) -> tuple[BallSeries, int]:
+        """The prefactor divided by 2^(k eps), and k."""
+        factor, two = self.prefactor.split_two()
+        return self._expanded(factor), two
+
+    @cached_property
     def massless_factor(self) -> EpsilonFactor:
         """Prefactor * Gamma(a+1+s) Gamma(b+1+s) / Gamma(a+b+2+2s)."""
         gamma, s0 = EpsilonFactor.gamma, self.s0
@@ -92,9 +98,10 @@ class FeynmanMoment:
         return top / gamma(self.a + self.b + 2 + 2 * s0, -2)
 
     @cached_property
-    def massless(self) -> BallSeries:
-        """The expansion of `massless_factor`."""
-        return self._expanded(self.massless_factor)
+    def massless(self) -> tuple[BallSeries, int]:
+        """The expansion of `massless_factor` divided by 2^(k eps), and k."""
+        factor, two = self.massless_factor.split_two()
+        return self._expanded(factor), two
 
     def _expanded(self, factor: EpsilonFactor) -> BallSeries:
         with working_precision(self.bits + 32):
@@ -112,14 +119,17 @@ class FeynmanMoment:
         return self._recurrence(point)
 
     def _both_massless(self, point: TwoPoint) -> BallSeries:
+        factor, two = self.massless
         logarithm = logarithm_below_cut(arb(-point.p_squared))
         constant = arb(1) if self.s0 == 0 else (arb(self.s0) * logarithm).exp()
-        return times_exponential(self.massless, -logarithm).scaled(constant)
+        base = logarithm_below_cut(arb(-point.p_squared * fmpq(2) ** -two))
+        return times_exponential(factor, -base).scaled(constant)
 
     def _constant(self, m_squared: ExactComplex) -> BallSeries:
         a, b = self.a, self.b
         beta = fmpq(factorial(a) * factorial(b), factorial(a + b + 1))
-        return times_mass_power(m_squared, self.bare, self.s0).scaled(beta)
+        bare, two = self.without_two
+        return times_mass_power(m_squared, bare, self.s0, two).scaled(beta)
 
     def _linear(self, m1: ExactComplex, m2: ExactComplex) -> BallSeries:
         """Use y = Q as variable: x = (y - m2^2)/delta, 1-x = (m1^2 - y)/delta."""

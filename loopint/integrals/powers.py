@@ -25,9 +25,15 @@ def times_exponential(value: BallSeries, rate: Ball) -> BallSeries:
     return value * BallSeries(0, exponential(rate, len(value.coefficients)))
 
 
-def times_mass_power(m_squared: ExactComplex, value: BallSeries, s0: fmpq) -> BallSeries:
-    """Return value * (m^2)^(s0 - eps)."""
-    return times_mass_exponent(m_squared, value, EpsilonLinear(s0, fmpq(-1)))
+def times_mass_power(
+    m_squared: ExactComplex, value: BallSeries, s0: fmpq, two: int = 0
+) -> BallSeries:
+    """Return value * 2^(two eps) (m^2)^(s0 - eps), exactly 1 where the base of eps is 1."""
+    if two == 0:
+        return times_mass_exponent(m_squared, value, EpsilonLinear(s0, fmpq(-1)))
+    power, _ = mass_power(m_squared, s0)
+    base = m_squared.scaled(fmpq(2) ** -two)
+    return times_exponential(value, -base.ball().log()).scaled(power)
 
 
 def times_mass_exponent(

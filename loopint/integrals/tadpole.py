@@ -44,12 +44,15 @@ def method(point: OnePoint, powers: tuple[int, ...], dimension: int) -> str:  # 
 
 
 @lru_cache(maxsize=256)
-def _prefactor(power: int, dimension: int, measure: Measure, highest: int, bits: int) -> BallSeries:
-    """Expand measure * Gamma(n - d/2)/Gamma(n), shared by all points."""
+def _prefactor(
+    power: int, dimension: int, measure: Measure, highest: int, bits: int
+) -> tuple[BallSeries, int]:
+    """Expand measure * Gamma(n - d/2)/Gamma(n) / 2^(k eps), shared by all points; return k too."""
     gamma = EpsilonFactor.gamma
     factor = measure.factor(dimension) * gamma(power - fmpq(dimension, 2), 1) / gamma(power, 0)
+    factor, two = factor.split_two()
     with working_precision(bits + 32):
-        return factor.series_through(highest)
+        return factor.series_through(highest), two
 
 
 def series(
@@ -63,5 +66,5 @@ def series(
     n = powers[0]
     if point.m_squared.is_zero or n <= 0:
         return BallSeries.zero(highest)
-    factor = _prefactor(n, dimension, measure, highest, current_bits())
-    return times_mass_power(point.m_squared, factor, fmpq(dimension, 2) - n)
+    factor, two = _prefactor(n, dimension, measure, highest, current_bits())
+    return times_mass_power(point.m_squared, factor, fmpq(dimension, 2) - n, two)
