@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import itertools
 import random
+from collections.abc import Iterator
 from fractions import Fraction
 
 import mpmath
@@ -289,3 +291,58 @@ def test_continuity_of_dotted_integrals_at_regular_points(
             with mpmath.workdps(40):
                 for k in at:
                     assert abs(at[k] - near[k]) < 100 * mpmath.mpf(10) ** -power + 1e-27
+
+
+SWEPT = [  # powers, d0, centre, m1^2, m2^2: continuous in dimensional regularisation
+    ((2, 1), 4, "1", "1", "4"),
+    ((2, 2), 6, "1", "1", "4"),
+    ((1, 2), 3, "0", "1", "4"),
+    ((2, 1), 4, "0", "3", "3"),
+    ((1, -2), 4, "9", "1", "4"),
+    ((2, 1), 6, "9", "1", "4"),
+    ((1, 1), 5, "9", "1", "4"),
+    ((1, 2), 8, "2", "0", "2"),
+]
+JUMPING = [  # nearby values grow without bound: the region says so
+    ((2, 1), 4, "9", "1", "4"),
+    ((1, 2), 3, "4", "1", "1"),
+    ((1, 2), 4, "2", "0", "2"),
+]
+
+
+def approach(
+    powers: tuple[int, int], dimension: int, centre: str, masses: tuple[str, str], side: int
+) -> Iterator[tuple[int, loopint.LaurentSeries]]:
+    """Go towards a degenerate point, from a tenth down to 10^-40 away."""
+    for exponent in (1, 4, 10, 20, 30, 40):
+        p_squared = Fraction(centre) + side * Fraction(1, 10**exponent)
+        near = loopint.bubble(p_squared, *masses, powers, dimension=dimension, digits=30)
+        assert near.status == "ok"
+        yield exponent, near
+
+
+@pytest.mark.parametrize("side", [1, -1])
+@pytest.mark.parametrize(("powers", "dimension", "centre", "m1", "m2"), SWEPT)
+def test_sweep_towards_a_degenerate_point_is_continuous(
+    powers: tuple[int, int], dimension: int, centre: str, m1: str, m2: str, side: int
+) -> None:
+    at = loopint.bubble(centre, m1, m2, powers, dimension=dimension, digits=30)
+    assert not at.region.endswith("_isolated")
+    for exponent, near in approach(powers, dimension, centre, (m1, m2), side):
+        with mpmath.workdps(40):
+            for k in at:
+                limit = 300 * mpmath.mpf(10) ** (-exponent / mpmath.mpf(2)) * (3 * exponent) ** 3
+                size = 1 + abs(at[k])
+                assert abs(near[k] - at[k]) < size * (limit + mpmath.mpf(10) ** -28), (exponent, k)
+
+
+@pytest.mark.parametrize("side", [1, -1])
+@pytest.mark.parametrize(("powers", "dimension", "centre", "m1", "m2"), JUMPING)
+def test_sweep_towards_an_isolated_point_grows(
+    powers: tuple[int, int], dimension: int, centre: str, m1: str, m2: str, side: int
+) -> None:
+    at = loopint.bubble(centre, m1, m2, powers, dimension=dimension, digits=30)
+    assert at.region.endswith("_isolated")
+    sizes = [abs(near[0]) for _, near in approach(powers, dimension, centre, (m1, m2), side)]
+    assert all(b > a for a, b in itertools.pairwise(sizes[1:]))
+    assert sizes[-1] > 20 * (1 + abs(at[0]))

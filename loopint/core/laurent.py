@@ -21,6 +21,8 @@ from loopint.core.numbers import (
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Mapping
 
+UNIT = arb(1)
+
 
 class BallSeries:
     """Sum of c_k eps^k for k = lowest .. highest, plus unknown terms above `highest`.
@@ -70,6 +72,9 @@ class BallSeries:
         return self.coefficients[order - self.lowest]
 
     def __add__(self, other: BallSeries) -> BallSeries:
+        if self.lowest == other.lowest:
+            pairs = zip(self.coefficients, other.coefficients, strict=False)
+            return BallSeries(self.lowest, [a + b for a, b in pairs])
         lowest = min(self.lowest, other.lowest)
         highest = min(self.highest, other.highest)
         return BallSeries(lowest, [self[k] + other[k] for k in range(lowest, highest + 1)])
@@ -146,14 +151,15 @@ def convolve(a: list[Ball], b: list[Ball], terms: int) -> list[Ball]:
     return result
 
 
-def exponential(rate: Ball, terms: int) -> list[Ball]:
-    """Return the first coefficients of exp(rate * eps) as a power series in eps.
+def exponential(rate: Ball, terms: int, constant: Ball = UNIT) -> list[Ball]:
+    """Return the first coefficients of constant * exp(rate * eps) as a power series in eps.
 
     A rate that is exactly zero gives exact zeros.
     """
-    result: list[Ball] = [arb(1)]
+    result = [constant]
     for k in range(1, terms):
-        result.append(result[-1] * rate / k)
+        last = result[-1] * rate
+        result.append(last / k if k > 1 else last)
     return result
 
 
@@ -256,9 +262,12 @@ def _hypotenuse_up(a: mpmath.mpf, b: mpmath.mpf) -> mpmath.mpf:
 
 def worst_accuracy_bits(series: BallSeries, orders: tuple[int, int]) -> int | None:
     """Return the smallest relative accuracy over the orders, or None if all are exact."""
-    found = [accuracy_bits(series[k]) for k in range(orders[0], orders[1] + 1)]
-    inexact = [bits for bits in found if bits is not None]
-    return min(inexact) if inexact else None
+    worst: int | None = None
+    for k in range(max(orders[0], series.lowest), orders[1] + 1):
+        bits = accuracy_bits(series[k])
+        if bits is not None and (worst is None or bits < worst):
+            worst = bits
+    return worst
 
 
 def check_orders(orders: tuple[int, int]) -> tuple[int, int]:

@@ -51,12 +51,12 @@ class ExactComplex:
     @property
     def is_real(self) -> bool:
         """Whether the imaginary part is exactly zero."""
-        return self.im == 0
+        return not self.im
 
     @property
     def is_zero(self) -> bool:
         """Whether the number is exactly zero."""
-        return self.re == 0 and self.im == 0
+        return not self.re and not self.im
 
     def __add__(self, other: ExactComplex) -> ExactComplex:
         return ExactComplex(self.re + other.re, self.im + other.im)
@@ -86,9 +86,7 @@ class ExactComplex:
 
     def ball(self) -> Ball:
         """Enclose the number at the working precision: an `arb` if real, else an `acb`."""
-        if self.im == 0:
-            return arb(self.re)
-        return acb(arb(self.re), arb(self.im))
+        return acb(arb(self.re), arb(self.im)) if self.im else arb(self.re)
 
     def __repr__(self) -> str:
         return f"ExactComplex(re={self.re}, im={self.im})"
@@ -102,21 +100,13 @@ def _shown(value: object) -> str:
 def _from_decimal(value: Decimal, shown: object) -> fmpq:
     if not value.is_finite():
         raise InputError(f"{_shown(shown)} is not a finite number; accepted: {REAL_KINDS}")
-    if value and abs(value.adjusted()) > MAX_EXPONENT:
+    if not value:
+        return ZERO
+    if abs(value.adjusted()) > MAX_EXPONENT:
         raise InputError(
             f"{_shown(shown)} has a decimal exponent beyond +-{MAX_EXPONENT}, the largest accepted"
         )
-    sign, digits, exponent = value.as_tuple()
-    assert isinstance(exponent, int)
-    mantissa = 0
-    for start in range(0, len(digits), 1000):  # int(str) refuses very long strings
-        block = digits[start : start + 1000]
-        mantissa = mantissa * 10 ** len(block) + int("".join(map(str, block)))
-    if sign:
-        mantissa = -mantissa
-    if mantissa == 0:
-        return ZERO
-    return fmpq(mantissa * 10**exponent) if exponent >= 0 else fmpq(mantissa, 10**-exponent)
+    return fmpq(*value.as_integer_ratio())
 
 
 def _from_string(value: str) -> fmpq:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 from contextlib import contextmanager
+from functools import cache
 from typing import TYPE_CHECKING
 
 import flint
@@ -20,8 +21,7 @@ BITS_PER_DIGIT = math.log2(10)
 WORD = 32
 
 
-@contextmanager
-def working_precision(bits: int) -> Iterator[None]:
+class working_precision:  # noqa: N801 - reads as a function
     """Compute with `bits` bits inside the block and restore the old precision after it.
 
     Examples
@@ -33,12 +33,18 @@ def working_precision(bits: int) -> Iterator[None]:
     >>> flint.ctx.prec
     53
     """
-    saved = flint.ctx.prec
-    flint.ctx.prec = bits
-    try:
-        yield
-    finally:
-        flint.ctx.prec = saved
+
+    __slots__ = ("_bits", "_saved")
+
+    def __init__(self, bits: int) -> None:
+        self._bits = bits
+
+    def __enter__(self) -> None:
+        self._saved = flint.ctx.prec
+        flint.ctx.prec = self._bits
+
+    def __exit__(self, *_: object) -> None:
+        flint.ctx.prec = self._saved
 
 
 @contextmanager
@@ -57,6 +63,7 @@ def current_bits() -> int:
     return int(flint.ctx.prec)
 
 
+@cache
 def bits_for_digits(digits: int) -> int:
     """Return the relative accuracy in bits that proves `digits` digits of a complex value.
 

@@ -23,6 +23,7 @@ from loopint.core.kinematics import Region, TwoPoint
 from loopint.core.laurent import BallSeries
 from loopint.core.numbers import Ball, ExactComplex
 from loopint.core.precision import current_bits
+from loopint.integrals.logarithms import logarithm_integral
 from loopint.integrals.moments import FeynmanMoment, ultraviolet_moment
 from loopint.integrals.numerators import numerator_series
 
@@ -87,12 +88,23 @@ def series(
         ordered = point.exchanged() if n1 <= 0 else point
         power = EpsilonLinear.of(max(n1, n2), 0)
         return numerator_series(ordered, power, -min(n1, n2), dimension, highest, measure)
-    bits = current_bits()
-    moment = _moment(n1, n2, dimension, measure, highest, bits)
+    moment = _moment(n1, n2, dimension, measure, highest, current_bits())
+    if highest == 0 and moment.is_plain and _has_logarithms(point):
+        integral = logarithm_integral(point)
+        if integral is not None:
+            lead, constant = moment.bare.coefficients
+            return BallSeries(-1, [lead, constant - lead * integral])
     result = moment.integrate(point)
     if point.m1_squared.is_zero and point.m2_squared.is_zero:
         return result
     return _clean(result, point, (n1, n2), dimension, highest, moment)
+
+
+def _has_logarithms(point: TwoPoint) -> bool:
+    """Whether Int log Q dx is one formula with logarithms: real masses, no degenerate point."""
+    if not point.masses_are_real or not point.p_squared or point.kallen.is_zero:
+        return False
+    return not (point.m1_squared.is_zero and point.m2_squared.is_zero)
 
 
 def _vanishes(point: TwoPoint, n1: int, n2: int) -> bool:
@@ -103,7 +115,7 @@ def _vanishes(point: TwoPoint, n1: int, n2: int) -> bool:
         return point.m2_squared.is_zero
     if n2 <= 0:
         return point.m1_squared.is_zero
-    return point.region is Region.SCALELESS
+    return not point.p_squared and point.m1_squared.is_zero and point.m2_squared.is_zero
 
 
 @lru_cache(maxsize=256)
@@ -130,9 +142,11 @@ def _clean(
     known: dict[int, Ball] = {}
     lowest = -1 if _has_pole(point, n1, n2, dimension) else 0
     if moment.s0 >= 0 and moment.s0.q == 1 and not point.snapped:
-        pole = ultraviolet_moment(point, n1 - 1, n2 - 1, int(moment.s0.p))
-        lead = moment.prefactor.series(1).coefficients[0]
-        known[-1] = (pole.ball() * lead) if not pole.is_zero else arb(0)
+        lead = moment.lead
+        if moment.s0 != 0 or lead != 1 or n1 * n2 > 1:
+            pole = ultraviolet_moment(point, n1 - 1, n2 - 1, int(moment.s0.p))
+            lead = arb(0) if pole.is_zero else pole.ball() * lead
+        known[-1] = lead
     if highest < lowest:
         return BallSeries.zero(highest)
     return BallSeries(lowest, [known.get(k, result[k]) for k in range(lowest, highest + 1)])

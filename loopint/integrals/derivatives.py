@@ -81,6 +81,8 @@ class DerivativeTerm:
         Nearby points carry (m^2)^(d/2-n) of the region of small momentum on the line, n its power
         in the differentiated integral; at m^2 = 0 dimensional regularisation drops it.
         """
+        if not any(self.mass_steps):
+            return False
         masses = (
             (point.m_squared,)
             if isinstance(point, OnePoint)

@@ -84,6 +84,16 @@ class FeynmanMoment:
         """The prefactor alone."""
         return self._expanded(self.prefactor)
 
+    @property
+    def is_plain(self) -> bool:
+        """Whether this is Gamma(eps) * measure * Int Q^(-eps) dx: d0 = 4, powers (1,1)."""
+        return self.a == self.b == 0 and self.s0 == 0
+
+    @cached_property
+    def lead(self) -> Ball:
+        """The first coefficient of the prefactor."""
+        return self.prefactor.series(1).coefficients[0]
+
     @cached_property
     def without_two(self) -> tuple[BallSeries, int]:
         """The prefactor divided by 2^(k eps), and k."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 from flint import arb, fmpq
 
 from loopint.core.epsilon_linear import EpsilonLinear
-from loopint.core.laurent import BallSeries, exponential
+from loopint.core.laurent import UNIT, BallSeries, convolve, exponential
 from loopint.core.numbers import Ball, ExactComplex
 
 
@@ -16,24 +16,34 @@ def mass_power(m_squared: ExactComplex, exponent: fmpq) -> tuple[Ball, Ball]:
     of m^2 - i0.
     """
     ball = m_squared.ball()
+    if exponent == 0:
+        return UNIT, ball.log()
     power = ball ** int(exponent.p) if exponent.q == 1 else ball.sqrt() ** int(exponent.p)
     return power, ball.log()
 
 
-def times_exponential(value: BallSeries, rate: Ball) -> BallSeries:
-    """Return value * exp(rate eps)."""
-    return value * BallSeries(0, exponential(rate, len(value.coefficients)))
+def times_exponential(value: BallSeries, rate: Ball, constant: Ball = UNIT) -> BallSeries:
+    """Return value * constant * exp(rate eps)."""
+    terms = len(value.coefficients)
+    factor = exponential(rate, terms, constant)
+    return BallSeries(value.lowest, convolve(value.coefficients, factor, terms))
 
 
 def times_mass_power(
-    m_squared: ExactComplex, value: BallSeries, s0: fmpq, two: int = 0
+    m_squared: ExactComplex,
+    value: BallSeries,
+    s0: fmpq,
+    two: int = 0,
+    constant: Ball = UNIT,
 ) -> BallSeries:
-    """Return value * 2^(two eps) (m^2)^(s0 - eps), exactly 1 where the base of eps is 1."""
-    if two == 0:
-        return times_mass_exponent(m_squared, value, EpsilonLinear(s0, fmpq(-1)))
-    power, _ = mass_power(m_squared, s0)
-    base = m_squared.scaled(fmpq(2) ** -two)
-    return times_exponential(value, -base.ball().log()).scaled(power)
+    """Return value * constant * 2^(two eps) (m^2)^(s0 - eps).
+
+    The logarithm is that of m^2/2^two, so that it is exactly zero where it vanishes.
+    """
+    power, logarithm = mass_power(m_squared, s0)
+    if two:
+        logarithm = m_squared.scaled(fmpq(2) ** -two).ball().log()
+    return times_exponential(value, -logarithm, constant if s0 == 0 else power * constant)
 
 
 def times_mass_exponent(

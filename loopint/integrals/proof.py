@@ -95,8 +95,8 @@ def prove(
     bits = min(round_up_to_word(needed + GUARD_BITS), max_bits)
     wishes = 0
     while True:
-        missing = bits  # double the precision unless the accuracy tells better
         series: BallSeries | None = None
+        missing = bits  # double the precision unless the accuracy tells better
         with working_precision(bits):
             try:
                 series = compute()

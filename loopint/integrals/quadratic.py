@@ -138,24 +138,24 @@ def _endpoints(point: TwoPoint) -> tuple[_Endpoint, _Endpoint]:
     m1, m2 = point.m1_squared, point.m2_squared
     p2 = ExactComplex(point.p_squared)
     size = point.kallen
-    root = size.ball().sqrt() if size.re > 0 or size.im != 0 else acb(0, arb(-size.re).sqrt())
+    root = size.ball().sqrt() if size.re > 0 or size.im else acb(0, arb(-size.re).sqrt())
     a1, a2 = p2 + m1 - m2, p2 - m1 + m2
     sigma1 = _nearer_root(a1, size, root)
     sigma2 = _nearer_root(a2, size, root, tie=-sigma1)
+    p_squared = arb(point.p_squared)
     return (
-        _endpoint(m1, a1, sigma1, root, point.p_squared),
-        _endpoint(m2, a2, sigma2, root, point.p_squared),
+        _endpoint(m1, a1, sigma1, root, p_squared),
+        _endpoint(m2, a2, sigma2, root, p_squared),
     )
 
 
 def _endpoint(
-    m_squared: ExactComplex, a: ExactComplex, sigma: int, root: Ball, p_squared: fmpq
+    m_squared: ExactComplex, a: ExactComplex, sigma: int, root: Ball, p_squared: arb
 ) -> _Endpoint:
     signed = root if sigma > 0 else -root
-    d = a.ball() + signed
-    weight = m_squared.scaled(fmpq(2)).ball() / d
-    w = 2 * arb(p_squared) * weight / d
-    return _Endpoint(m_squared, sigma, weight, w, 2 * signed / d)
+    inverse = 2 / (a.ball() + signed)
+    weight = m_squared.ball() * inverse
+    return _Endpoint(m_squared, sigma, weight, p_squared * weight * inverse, signed * inverse)
 
 
 def _nearer_root(a: ExactComplex, size: ExactComplex, root: Ball, tie: int = 1) -> int:
@@ -185,7 +185,7 @@ def _endpoint_term(end: _Endpoint, tables: QuadraticTables) -> BallSeries:
         value = tables.far.evaluate(-(-end.w).log1p())
     else:
         value = _near_one(end, tables)
-    return times_mass_power(end.m_squared, value, tables.s0).scaled(end.weight)
+    return times_mass_power(end.m_squared, value, tables.s0, constant=end.weight)
 
 
 def _near_one(end: _Endpoint, tables: QuadraticTables) -> BallSeries:
@@ -194,7 +194,7 @@ def _near_one(end: _Endpoint, tables: QuadraticTables) -> BallSeries:
     singular = tables.singular
     # v^(1+2s) w^(-1-s) at eps = 0
     constant = v / end.w if s0 == 0 else ((1 + 2 * s0) * v.log() - (1 + s0) * log_w).exp()
-    singular = times_exponential(singular, log_w - 2 * v.log()).scaled(constant)
+    singular = times_exponential(singular, log_w - 2 * v.log(), constant)
     return tables.near.evaluate(-log_w) + singular
 
 
@@ -205,4 +205,4 @@ def _between_roots(point: TwoPoint, sigma: int, tables: QuadraticTables) -> Ball
     constant = sigma * point.kallen.ball().sqrt() / arb(point.p_squared)
     if tables.s0 != 0:
         constant = constant * (arb(tables.s0) * logarithm).exp()
-    return times_exponential(tables.between_roots, -logarithm).scaled(constant)
+    return times_exponential(tables.between_roots, -logarithm, constant)

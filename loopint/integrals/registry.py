@@ -12,6 +12,7 @@ from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.core.errors import InputError
 from loopint.core.kinematics import OnePoint, TwoPoint
 from loopint.core.laurent import BallSeries, check_orders
+from loopint.core.lazy import lazy
 from loopint.core.numbers import Ball, exact_real
 from loopint.integrals import bubble, propagator, tadpole
 from loopint.integrals.derivatives import (
@@ -101,7 +102,7 @@ FAMILIES: dict[str, Family] = {
 }
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class Integral:
     """Which integral, in which dimension, to which orders; everything but the point.
 
@@ -148,12 +149,12 @@ class Integral:
         variables = check_derivatives(derivatives, found.variables)
         return cls(family, parsed, dimension, check_orders(orders), variables)
 
-    @property
+    @lazy
     def term(self) -> DerivativeTerm:
         """What is evaluated: the integral itself, or the one its derivative is a multiple of."""
         return derivative_term(self.powers, self.dimension, self.derivatives)
 
-    @property
+    @lazy
     def mass_dimension(self) -> fmpq:
         """The power of p^2 that the Laurent coefficients scale with.
 
@@ -174,10 +175,86 @@ class Integral:
             for n in self.powers
         )
 
-    @property
+    @lazy
     def epsilon_power(self) -> fmpq:
         """The coefficient of eps in the sum of the powers."""
         return sum((_at_zero(n).rate for n in self.powers), start=fmpq(0))
+
+
+class Evaluator:
+    """An integral in given conventions, prepared for many points.
+
+    Parameters
+    ----------
+    integral
+        From `Integral.parse`.
+    conventions
+        Measure, propagator sign and mu^2 (in the units of the points).
+    digits
+        |error| <= 10^-digits |value| for each complex Laurent coefficient.
+    max_precision_bits
+        Cap on the working precision; when reached the result has `proven=False`.
+
+    Raises
+    ------
+    InputError
+        For digits outside their range.
+    """
+
+    def __init__(
+        self,
+        integral: Integral,
+        conventions: Conventions = Conventions(),  # noqa: B008 - immutable
+        *,
+        digits: int = 30,
+        max_precision_bits: int = DEFAULT_MAX_PRECISION_BITS,
+    ) -> None:
+        self.integral = integral
+        self.conventions = conventions
+        self.digits = check_digits(digits)
+        self.max_precision_bits = max_precision_bits
+        self.family = FAMILIES[integral.family]
+        self.term = term = integral.term
+        self._unit_scale = conventions.mu_squared == 1
+        self._inverse_scale = 1 / conventions.mu_squared
+        total = sum(int(_at_zero(n).constant.p) for n in term.powers)
+        self._sign = conventions.propagator_sign.sign(total)
+
+    def __call__(
+        self, point: Point, accept: Callable[[BallSeries], bool] | None = None
+    ) -> Evaluation:
+        """Evaluate at a point in the user's units; for `accept` see `prove`."""
+        integral = self.integral
+        reduced = point if self._unit_scale else point.scaled(self._inverse_scale)
+        series, bits, proven = prove(
+            lambda: self._series(reduced),
+            integral.orders,
+            self.digits,
+            self.max_precision_bits,
+            accept,
+        )
+        region, method = _region_and_method(self.family, integral, point)
+        return Evaluation(series, integral.orders, self.digits, region, method, bits, proven)
+
+    def _series(self, point: Point) -> BallSeries:
+        """Expand at the working precision; the point is in units of mu^2."""
+        integral, term, conventions = self.integral, self.term, self.conventions
+        highest = integral.orders[1]
+        if term.coefficient == 0:
+            return BallSeries.zero(highest)
+        series = self.family.series(
+            point, term.powers, term.dimension, highest, conventions.measure
+        )
+        for linear in term.linear_factors:
+            series = times_linear(series, linear.constant, linear.rate)
+        factor = self._sign * term.factor(conventions)
+        if factor != 1:
+            series = series.scaled(factor)
+        if not self._unit_scale and integral.mass_dimension != 0:
+            series = series.scaled(_rational_power(conventions.mu_squared, integral.mass_dimension))
+        if integral.epsilon_power != 0:
+            series = _times_epsilon_phase(series, integral.epsilon_power, conventions)
+        return series
 
 
 def evaluate(
@@ -189,51 +266,11 @@ def evaluate(
     max_precision_bits: int = DEFAULT_MAX_PRECISION_BITS,
     accept: Callable[[BallSeries], bool] | None = None,
 ) -> Evaluation:
-    """Evaluate one integral at one point with proven digits.
-
-    Parameters
-    ----------
-    integral
-        From `Integral.parse`.
-    point
-        `OnePoint` or `TwoPoint`, as the family needs, in the user's units.
-    conventions
-        Measure, propagator sign and mu^2 (same units).
-    digits
-        |error| <= 10^-digits |value| for each complex Laurent coefficient.
-    max_precision_bits
-        Cap on the working precision; when reached the result has `proven=False`.
-    accept
-        See `loopint.integrals.proof.prove`.
-    """
-    family = FAMILIES[integral.family]
-    check_digits(digits)
-    lowest, highest = integral.orders
-    scale = conventions.mu_squared
-    reduced = point if scale == 1 else point.scaled(1 / scale)
-    term = integral.term
-    sign = conventions.propagator_sign.sign(sum(int(_at_zero(n).constant.p) for n in term.powers))
-    measure = conventions.measure
-    dimension = integral.mass_dimension
-
-    def compute() -> BallSeries:
-        if term.coefficient == 0:
-            return BallSeries.zero(highest)
-        series = family.series(reduced, term.powers, term.dimension, highest, measure)
-        for linear in term.linear_factors:
-            series = times_linear(series, linear.constant, linear.rate)
-        factor = sign * term.factor(conventions)
-        if factor != 1:
-            series = series.scaled(factor)
-        if scale != 1 and dimension != 0:
-            series = series.scaled(_rational_power(scale, dimension))
-        if integral.epsilon_power != 0:
-            series = _times_epsilon_phase(series, integral.epsilon_power, conventions)
-        return series
-
-    series, bits, proven = prove(compute, (lowest, highest), digits, max_precision_bits, accept)
-    region, method = _region_and_method(family, integral, point)
-    return Evaluation(series, integral.orders, digits, region, method, bits, proven)
+    """Evaluate one integral at one point with proven digits; see `Evaluator`."""
+    evaluator = Evaluator(
+        integral, conventions, digits=digits, max_precision_bits=max_precision_bits
+    )
+    return evaluator(point, accept)
 
 
 def _region_and_method(family: Family, integral: Integral, point: Point) -> tuple[str, str]:
