@@ -233,7 +233,7 @@ def propagator(
 
 def formula(
     family: str,
-    powers: int | tuple[int, ...] | None = None,
+    powers: int | tuple[PowerInput, ...] | None = None,
     *,
     kinematics: str = "general",
     dimension: int = 4,
@@ -241,16 +241,17 @@ def formula(
     propagator_sign: str = "minkowski",
     measure: str = "msbar",
 ) -> Formula:
-    """Return the closed form of a tadpole or bubble and its Laurent coefficients as formulas.
+    """Return the closed form of an integral and its Laurent coefficients as formulas.
 
     Parameters
     ----------
     family
-        "tadpole" or "bubble".
+        "tadpole", "bubble" or "propagator".
     powers
-        Integer powers; by default 1 for every propagator.
+        Integer powers, in a propagator also pairs (n, a) for n + a eps; by default 1 for every
+        propagator.
     kinematics
-        For a bubble a name of `loopint.integrals.reduction.Kinematics`: "general", "equal_mass",
+        For a bubble or propagator a name of `loopint.integrals.reduction.Kinematics`: "general", "equal_mass",
         "one_massless", "both_massless", "zero_momentum", "zero_momentum_equal_mass",
         "zero_momentum_one_massless", "threshold", "pseudothreshold" or "on_shell".
     dimension
@@ -264,7 +265,9 @@ def formula(
     -------
     Formula
         `closed_form` and `coefficients` are sympy expressions; `as_text`, `as_latex`, `as_python`
-        and `as_sympy` print them with their domain, i0 prescription and sources.
+        and `as_sympy` print them with their domain, i0 prescription and sources.  A Gauss function
+        with epsilon in its parameters (a propagator with two scales) has a closed form in d
+        dimensions and no coefficients.
 
     Raises
     ------

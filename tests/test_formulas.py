@@ -104,6 +104,8 @@ def engine(formula: Formula, sample: Sample, orders: tuple[int, int]) -> loopint
     }
     if formula.family == "tadpole":
         return loopint.tadpole(*sample.point, formula.powers[0], **keywords)
+    if formula.family == "propagator":
+        return loopint.propagator(*sample.point, formula.powers, **keywords)
     return loopint.bubble(*sample.point, formula.powers, **keywords)
 
 
@@ -243,6 +245,70 @@ def test_closed_forms(kinematics, dimension):
     check_closed_form(
         loopint.formula("bubble", kinematics=kinematics, dimension=dimension), f"closed {dimension}"
     )
+
+
+EPSILON_POWERS = [((1, 1), 1), ((1, "1/2"), (2, -2)), (2, (1, "-1/3")), ((1, 2), (1, 1))]
+ONE_SCALE = [
+    Kinematics.BOTH_MASSLESS,
+    Kinematics.ON_SHELL,
+    Kinematics.ZERO_MOMENTUM_EQUAL_MASS,
+    Kinematics.ZERO_MOMENTUM_ONE_MASSLESS,
+]
+
+
+@pytest.mark.parametrize("kinematics", ONE_SCALE)
+@pytest.mark.parametrize("powers", EPSILON_POWERS)
+@pytest.mark.parametrize("dimension", [3, 4, 6])
+def test_powers_that_depend_on_epsilon(kinematics, powers, dimension):
+    for sign, measure in (("minkowski", "msbar"), ("euclidean", "r_gamma")):
+        formula = loopint.formula(
+            "propagator",
+            powers,
+            kinematics=kinematics,
+            dimension=dimension,
+            orders=(-2, 3),
+            propagator_sign=sign,
+            measure=measure,
+        )
+        check_formula(formula, f"{kinematics} {powers} {dimension}")
+        check_closed_form(formula, f"closed {kinematics} {powers} {dimension}")
+
+
+@pytest.mark.parametrize("kinematics", [Kinematics.ONE_MASSLESS, Kinematics.ZERO_MOMENTUM])
+@pytest.mark.parametrize(
+    ("powers", "dimension"),
+    [
+        *((p, d) for p in EPSILON_POWERS for d in (3, 4)),
+        (((1, "1/2"), (2, -1)), 3),  # a - b does not depend on eps
+        (((1, "1/2"), (2, -1)), 6),
+    ],
+)
+def test_gauss_functions_of_powers_that_depend_on_epsilon(kinematics, powers, dimension):
+    formula = loopint.formula("propagator", powers, kinematics=kinematics, dimension=dimension)
+    assert formula.coefficients == {}
+    assert "loopint.propagator evaluates them" in formula.as_text()
+    check_closed_form(formula, f"gauss {kinematics} {powers} {dimension}")
+
+
+def test_propagators_with_integer_powers_are_bubbles():
+    assert loopint.formula("propagator", (2, (1, 0))) == loopint.formula("bubble", (2, 1))
+
+
+def test_lerch_form_of_a_power_that_depends_on_epsilon():
+    """2F1(1, b; b+1; z): powers 3/2 - eps - ... make N - d/2 = 1 with the massless power b."""
+    formula = loopint.formula(
+        "propagator", ((1, -1), (2, 0)), kinematics="one_massless", dimension=4
+    )
+    assert formula.closed_form.has(sympy.lerchphi)
+    check_closed_form(formula, "lerch")
+
+
+@pytest.mark.parametrize("kinematics", ["general", "equal_mass", "threshold", "pseudothreshold"])
+def test_propagators_without_closed_form_are_refused(kinematics):
+    with pytest.raises(loopint.UnsupportedIntegralError, match="no closed form"):
+        loopint.formula("propagator", ((1, 1), 1), kinematics=kinematics)
+    with pytest.raises(loopint.UnsupportedIntegralError, match="above threshold"):
+        loopint.formula("propagator", ((1, "-1/2"), (1, -1)), kinematics="one_massless")
 
 
 @pytest.mark.parametrize("kinematics", GENERIC)

@@ -3,6 +3,7 @@
 ========================================  ==========================================================
 tadpole, both_massless, on_shell,         a product of Gamma functions and one power
 zero_momentum_equal_mass
+epsilon in the powers                     `loopint.formulas.propagators`
 everything else                           `loopint.integrals.reduction` to tadpoles A(1) and, where
                                           the kinematics has it, the bubble B(1,1), in d = 2 - 2 eps
                                           or d = 3 - 2 eps; B(1,1) from `loopint.formulas.masters`
@@ -20,9 +21,10 @@ import sympy
 from flint import fmpq
 
 from loopint.core.conventions import Conventions, Measure, PropagatorSign
+from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.core.errors import InputError, UnsupportedIntegralError
 from loopint.core.gamma_factors import EpsilonFactor
-from loopint.formulas import masters
+from loopint.formulas import masters, propagators
 from loopint.formulas.expansion import (
     EPS,
     Expansion,
@@ -42,20 +44,20 @@ from loopint.integrals.reduction import Kinematics, reduce_bubble
 from loopint.integrals.registry import Integral
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterable
+    from collections.abc import Callable, Iterable, Sequence
 
 S = sympy.S
 HIGHEST = 8
-FAMILIES = ("tadpole", "bubble")
+FAMILIES = ("tadpole", "bubble", "propagator")
 M_SQUARED, M1_SQUARED, M2_SQUARED = map(symbol, ("m_squared", "m1_squared", "m2_squared"))
 M = symbol("m")
-L, L1, L2 = map(symbol, ("l", "l_1", "l_2"))
+L, L1, L2, L_MU = map(symbol, ("l", "l_1", "l_2", "l_mu"))
 KALLEN_POLYNOMIAL = sympy.expand((P2 - M1_SQUARED - M2_SQUARED) ** 2 - 4 * M1_SQUARED * M2_SQUARED)
 
 
 def build_formula(
     family: str,
-    powers: int | tuple[int, ...] | None = None,
+    powers: int | Sequence[object] | None = None,
     *,
     kinematics: str = "general",
     dimension: int = 4,
@@ -67,6 +69,10 @@ def build_formula(
     if family not in FAMILIES:
         raise InputError(f"family = {family!r}: no formula; accepted: {', '.join(FAMILIES)}")
     integral = Integral.parse(family, powers, dimension, orders)
+    if family == "propagator" and integral.epsilon_power_free:
+        family = "bubble"  # integer powers
+        plain = tuple(int(n.constant.p) for n in integral.powers)
+        integral = Integral.parse(family, plain, dimension, orders)
     conventions = Conventions.parse(measure, propagator_sign, 1)
     if integral.orders[1] > HIGHEST:
         raise UnsupportedIntegralError(
@@ -77,6 +83,8 @@ def build_formula(
     request = _Request(integral, chosen, conventions.measure, conventions.propagator_sign)
     if family == "tadpole":
         pieces, symbols = _tadpole(request), (M_SQUARED, MU2)
+    elif family == "propagator":
+        pieces, symbols = _propagator(request), _variables(chosen)
     else:
         pieces, symbols = _bubble(request), _variables(chosen)
     pieces = [_pruned(piece) for piece in pieces]
@@ -111,7 +119,29 @@ class _Request:
 
     @property
     def sign(self) -> int:
-        return self.sign_convention.sign(sum(self.integral.powers))
+        return self.sign_convention.sign(sum(int(n.constant.p) for n in self.linear_powers))
+
+    @property
+    def linear_powers(self) -> tuple[EpsilonLinear, ...]:
+        """The powers, with the parts that depend on eps."""
+        return tuple(
+            n if isinstance(n, EpsilonLinear) else EpsilonLinear.of(n, 0)
+            for n in self.integral.powers
+        )
+
+    def scale_rate(self, logarithm: Expr) -> Expr:
+        """Return r in exp(-eps r), what sign and scale contribute at a logarithm L of the scale.
+
+        The scale is (Q/mu^2)^(-eps) and, with powers n + a eps of sum N + A eps, Q^(-A eps)
+        exp(-i pi A eps) for minkowski propagators: mu^2 enters only as (mu^2)^eps.
+        """
+        rate = rational(self.integral.epsilon_power)
+        if rate == 0:
+            return logarithm
+        phase = S.Zero
+        if self.sign_convention is PropagatorSign.MINKOWSKI:
+            phase = sympy.I * sympy.pi
+        return logarithm + rate * (logarithm + L_MU + phase)
 
     @property
     def measure_factor(self) -> EpsilonFactor:
@@ -207,7 +237,7 @@ def _on_shell(request: _Request) -> list[Piece]:
 
 def _gamma_piece(
     request: _Request,
-    gammas: Iterable[tuple[fmpq, int, int]],
+    gammas: Iterable[tuple[fmpq, fmpq | int, int]],
     divisor: int,
     conditions: tuple[Expr, ...],
     base: Expr,
@@ -218,22 +248,67 @@ def _gamma_piece(
     for a, b, k in gammas:
         one = EpsilonFactor.gamma(a, b)
         factor = factor * one if k > 0 else factor / one
-        expression *= sympy.gamma(rational(fmpq(a)) + b * EPS) ** k
+        expression *= sympy.gamma(rational(fmpq(a)) + rational(fmpq(b)) * EPS) ** k
     weight = sympy.Rational(request.sign, divisor)
     s0 = rational(request.s0)
     power = base**s0 * sympy.exp(sympy.I * sympy.pi * phase * s0)
     logarithm = sympy.log(base / MU2) + sympy.I * sympy.pi * phase
+    rate = request.scale_rate(L)
     count = request.integral.orders[1] - factor.lowest_order + 1
     series = Expansion(request.integral.orders[1], (S.Zero,))
     if count > 0:
-        series = expand_factor(factor, count) * exponential(-L, count)
+        series = expand_factor(factor, count) * exponential(-rate, count)
     lead, sign = root_pi(factor) * power / divisor, request.sign
     return Piece(
         conditions,
-        ((L, logarithm),),
-        weight * power * expression * sympy.exp(-EPS * L),
-        request.coefficients(lambda order: lead * (sign * tidy(series[order], [L], []))),
+        ((L, logarithm), (L_MU, sympy.log(MU2))),
+        weight * power * expression * sympy.exp(-EPS * rate),
+        request.coefficients(lambda order: lead * (sign * tidy(series[order], [L, L_MU], []))),
     )
+
+
+# Powers that depend on epsilon ----------------------------------------------------------------
+
+
+def _propagator(request: _Request) -> list[Piece]:
+    propagators.check_kinematics(request.kinematics)
+    powers, dimension = request.linear_powers, request.integral.dimension
+    product = propagators.gamma_product(request.kinematics, powers, dimension)
+    if product is None:
+        return _gauss_pieces(request, powers, dimension)
+    if any(x.is_pole_of_gamma for x in product.denominator):
+        return request.zero()
+    gammas = [(x.constant, x.rate, 1) for x in product.numerator]
+    gammas += [(x.constant, x.rate, -1) for x in product.denominator]
+    if request.kinematics is Kinematics.BOTH_MASSLESS:
+        return [
+            _gamma_piece(request, gammas, 1, (P2 < 0,), -P2, 0),
+            _gamma_piece(request, gammas, 1, (P2 > 0,), P2, -1),
+        ]
+    return [_gamma_piece(request, gammas, 1, (), M_SQUARED, 0)]
+
+
+def _gauss_pieces(
+    request: _Request, powers: tuple[EpsilonLinear, ...], dimension: int
+) -> list[Piece]:
+    """Return closed forms without Laurent coefficients."""
+    form = propagators.gauss_form(request.kinematics, powers, dimension)
+    if any(x.is_pole_of_gamma for x in form.gammas.denominator):
+        return request.zero()
+    one_massless = request.kinematics is Kinematics.ONE_MASSLESS
+    scale = M_SQUARED if one_massless else M2_SQUARED
+    front = request.sign * request.measure_expression() * scale ** rational(request.s0)
+    front *= propagators.gamma_expression(form.gammas) * sympy.exp(-EPS * request.scale_rate(L))
+    definitions = ((L, sympy.log(scale / MU2)), (L_MU, sympy.log(MU2)))
+    z = P2 / M_SQUARED if one_massless else 1 - M1_SQUARED / M2_SQUARED
+    if not one_massless:
+        return [Piece((), definitions, front * propagators.gauss_function(form, z), {})]
+    below = front * propagators.gauss_function(form, z)
+    beyond = front * propagators.beyond_one(form, z)
+    return [
+        Piece((P2 < M_SQUARED,), definitions, below, {}),
+        Piece((P2 > M_SQUARED,), definitions, beyond, {}),
+    ]
 
 
 # Masters --------------------------------------------------------------------------------------

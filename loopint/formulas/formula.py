@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import sympy
 
+from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.core.errors import InputError
 from loopint.formulas import printing
 from loopint.formulas.expansion import Expr
@@ -75,7 +76,7 @@ class Formula:
     """
 
     family: str
-    powers: tuple[int, ...]
+    powers: tuple[int | EpsilonLinear, ...]
     kinematics: str
     dimension: int
     orders: tuple[int, int]
@@ -103,7 +104,8 @@ class Formula:
         Raises
         ------
         KeyError
-            If the order is outside `orders`.
+            If the order is outside `orders`, or a Gauss function with epsilon in its parameters has
+            no coefficients in closed form.
         """
         return self._joined([piece.spelled_out(piece.coefficients[order]) for piece in self.pieces])
 

@@ -5,9 +5,11 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from loopint.core.conventions import Measure, PropagatorSign
+from loopint.core.epsilon_linear import EpsilonLinear
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
+
 
 TEXT_NAMES = {
     "kallen": "lambda",
@@ -15,11 +17,13 @@ TEXT_NAMES = {
     "A_2": "A2",
     "l_1": "l1",
     "l_2": "l2",
+    "l_mu": "log(mu^2)",
     **{f"L_{k}": f"L{k}" for k in range(1, 60)},
 }
 LATEX_NAMES = {
     "eps": r"\varepsilon",
     "kallen": r"\lambda",
+    "l_mu": r"\log{\left(\mu^{2} \right)}",
     "mu": r"\mu",
     "m1": "m_{1}",
     "m2": "m_{2}",
@@ -30,7 +34,7 @@ LATEX_NAMES = {
     "phi1": r"\varphi_{1}",
     "phi2": r"\varphi_{2}",
 }
-LETTERS = {"tadpole": "A", "bubble": "B"}
+LETTERS = {"tadpole": "A", "bubble": "B", "propagator": "P"}
 HEADINGS = {
     "general": "general kinematics",
     "equal_mass": "equal masses",
@@ -52,7 +56,28 @@ MEASURES = {
 }
 
 
-def integral_definition(family: str, powers: Sequence[int], sign: PropagatorSign) -> str:
+def power_text(power: int | EpsilonLinear) -> str:
+    """Write a power of a propagator.
+
+    Examples
+    --------
+    >>> power_text(2), power_text(EpsilonLinear.of(1, -1)), power_text(EpsilonLinear.of(0, 2))
+    ('2', '1 - eps', '2 eps')
+    """
+    if isinstance(power, int):
+        return str(power)
+    n, a = power.constant, power.rate
+    if a == 0:
+        return str(n)
+    rate = "eps" if abs(a) == 1 else f"{abs(a)} eps"
+    if n == 0:
+        return rate if a > 0 else f"-{rate}"
+    return f"{n} {'+' if a > 0 else '-'} {rate}"
+
+
+def integral_definition(
+    family: str, powers: Sequence[int | EpsilonLinear], sign: PropagatorSign
+) -> str:
     """Write the definition of the integral."""
     momenta = ("q^2", "(q+p)^2")
     masses = ("m^2",) if family == "tadpole" else ("m1^2", "m2^2")
@@ -62,7 +87,8 @@ def integral_definition(family: str, powers: Sequence[int], sign: PropagatorSign
             factor = f"({momentum} - {mass} + i0)"
         else:
             factor = f"({mass} - {momentum} - i0)"
-        exponent = "" if power == 1 else f"^{power}" if power > 0 else f"^({power})"
+        text = power_text(power)
+        exponent = "" if text == "1" else f"^{text}" if text.isdigit() else f"^({text})"
         factors.append(factor + exponent)
     name = LETTERS[family]
     return f"{name} = N(eps) (mu^2)^eps Int d^dq/(i pi^(d/2)) 1/[{' '.join(factors)}]"

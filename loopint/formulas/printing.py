@@ -21,6 +21,7 @@ from loopint.formulas.names import (
     MEASURES,
     TEXT_NAMES,
     integral_definition,
+    power_text,
 )
 
 if TYPE_CHECKING:
@@ -30,6 +31,9 @@ if TYPE_CHECKING:
 
 WIDTH = 100
 SQUARED = "_squared"
+NO_COEFFICIENTS = (
+    "of this Gauss function have no closed form here; loopint.propagator evaluates them"
+)
 
 
 # Text -----------------------------------------------------------------------------------------
@@ -151,6 +155,8 @@ def as_text(formula: Formula) -> str:
     for prefix, value in _by_piece(formula, [p.closed_form for p in formula.pieces]):
         lines += _wrapped(f"{prefix}{LETTERS[formula.family]} = {text_of(value)}")
     lines += ["", "Laurent coefficients"]
+    if not formula.pieces[0].coefficients:
+        lines.append(f"  {NO_COEFFICIENTS}")
     for order in formula.pieces[0].coefficients:
         values = [p.coefficients[order] for p in formula.pieces]
         for prefix, value in _by_piece(formula, values):
@@ -161,7 +167,7 @@ def as_text(formula: Formula) -> str:
 
 
 def _title(formula: Formula) -> str:
-    return f"{formula.family}({', '.join(map(str, formula.powers))})"
+    return f"{formula.family}({', '.join(map(power_text, formula.powers))})"
 
 
 def _wrapped(text: str) -> list[str]:
@@ -286,7 +292,8 @@ def as_latex(formula: Formula) -> str:
         if piece.conditions and any(own_rows):
             rows += [rf"&\text{{for }} {_latex_condition(piece)}:", *own_rows]
     values = [p.closed_form for p in formula.pieces]
-    name = f"{LETTERS[formula.family]}({', '.join(map(str, formula.powers))})"
+    powers = ", ".join(map(power_text, formula.powers)).replace("eps", r"\varepsilon")
+    name = f"{LETTERS[formula.family]}({powers})"
     rows += _latex_values(formula, name, values)
     for order in formula.pieces[0].coefficients:
         values = [p.coefficients[order] for p in formula.pieces]

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING
 
 import sympy
 
+from loopint.core.epsilon_linear import EpsilonLinear
 from loopint.formulas.functions import NielsenS, clausen2, log_sine
 
 if TYPE_CHECKING:
@@ -27,6 +28,7 @@ REDUCTION = (
     "reduction to masters: Chetyrkin, Tkachov, Nucl. Phys. B192 (1981) 159; Tarasov, hep-th/9606018"
 )
 LERCH = "2F1(1,b;b+1;z) = b Phi(z,1,b), Lerch's function: DLMF 15.2.1, 25.14.1"
+BEYOND = "above threshold, by functions of 1/z or 1-1/z: DLMF 15.8.2, 15.8.5"
 GAUSS = "the value on shell by Gauss's sum: DLMF 15.4.20"
 
 REAL = "nothing to choose: Q > 0 between the ends of the Feynman parameter"
@@ -78,7 +80,7 @@ def prescription(name: str, pieces: Sequence[Piece]) -> str:
 
 
 def sources(
-    name: str, powers: tuple[int, ...], dimension: int, pieces: Sequence[Piece]
+    name: str, powers: tuple[int | EpsilonLinear, ...], dimension: int, pieces: Sequence[Piece]
 ) -> tuple[str, ...]:
     """Name the publications of what the formula uses, by the functions in it."""
     values = [
@@ -98,16 +100,19 @@ def sources(
 
     special = uses(sympy.hyper)
     gamma_only = {"tadpole", "both_massless", "zero_momentum_equal_mass"}
+    linear = any(isinstance(n, EpsilonLinear) for n in powers)
+    one_mass = linear and name in {"one_massless", "zero_momentum_one_massless"}
     found = {
-        REDUCTION: name not in {*gamma_only, "on_shell"},
+        REDUCTION: name not in {*gamma_only, "on_shell"} and not linear,
         MASSLESS: name == "both_massless",
-        ONE_MASS: name == "on_shell" or (special and name == "one_massless"),
+        ONE_MASS: name == "on_shell" or one_mass or (special and name == "one_massless"),
         GAUSS: name == "on_shell",
         EULER: special,
         NIELSEN: uses(sympy.polylog, NielsenS),
         LOG_SINE: uses(clausen2, log_sine),
         LERCH: uses(sympy.lerchphi),
         FINITE_PART: special and (powers, dimension) == ((1, 1), 4),
-        GAMMA: True,
+        BEYOND: linear and special and len(pieces) > 1,
+        GAMMA: any(piece.coefficients for piece in pieces),
     }
     return tuple(source for source, used in found.items() if used)

@@ -175,6 +175,11 @@ class Integral:
             for n in self.powers
         )
 
+    @property
+    def epsilon_power_free(self) -> bool:
+        """Whether no power depends on epsilon."""
+        return all(_at_zero(n).rate == 0 for n in self.powers)
+
     @lazy
     def epsilon_power(self) -> fmpq:
         """The coefficient of eps in the sum of the powers."""

@@ -223,7 +223,7 @@ def requested_formula(
 
     return build_formula(
         family,
-        None if powers is None else _integers("powers", powers, "such as 1,1"),
+        None if powers is None else _powers(powers),
         kinematics=kinematics,
         dimension=dimension,
         orders=_pair(orders),
