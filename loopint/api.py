@@ -251,8 +251,8 @@ def formula(
         Integer powers, in a propagator also pairs (n, a) for n + a eps; by default 1 for every
         propagator.
     kinematics
-        For a bubble or propagator a name of `loopint.integrals.reduction.Kinematics`: "general", "equal_mass",
-        "one_massless", "both_massless", "zero_momentum", "zero_momentum_equal_mass",
+        For a bubble or propagator a name of `loopint.integrals.reduction.Kinematics`: "general",
+        "equal_mass", "one_massless", "both_massless", "zero_momentum", "zero_momentum_equal_mass",
         "zero_momentum_one_massless", "threshold", "pseudothreshold" or "on_shell".
     dimension
         d0, an integer from 1 to 12; d = d0 - 2 eps.

@@ -182,21 +182,34 @@ def bubble_array(
         },
         on_invalid,
     )
-    arrays = Arrays.empty(integral.orders, p.size)
-    plan = recipe(integral, conventions)
-    if plan is None:
-        arrays.missing[:] = True
-    elif integral.orders[1] >= plan.lowest:
-        with np.errstate(all="ignore"):
-            _fill(arrays, plan, (p, m1, m2), logarithm_of_scale(mu_squared), tolerance)
+    arrays = bubble_doubles(integral, conventions, (p, m1, m2), tolerance)
 
     def point(i: int) -> TwoPoint:
         return TwoPoint(exact_real(p[i]), exact_complex(m1[i]), exact_complex(m2[i]))
 
-    if plan is not None:
-        arrays.make_zero(np.flatnonzero((p == 0) & (m1 == 0) & (m2 == 0)))  # scaleless
     finish(arrays, integral, conventions, point, invalid)
     return arrays.result(integral.orders, shape, invalid)
+
+
+def bubble_doubles(
+    integral: Integral,
+    conventions: Conventions,
+    kinematics: tuple[Real, Number, Number],
+    tolerance: Tolerance,
+) -> Arrays:
+    """Evaluate valid points in doubles; the others, and all without a recipe, are `missing`."""
+    p, m1, m2 = kinematics
+    arrays = Arrays.empty(integral.orders, p.size)
+    plan = recipe(integral, conventions)
+    if plan is None:
+        arrays.missing[:] = True
+        return arrays
+    if integral.orders[1] >= plan.lowest:
+        with np.errstate(all="ignore"):
+            log_mu = logarithm_of_scale(conventions.mu_squared)
+            _fill(arrays, plan, kinematics, log_mu, tolerance)
+    arrays.make_zero(np.flatnonzero((p == 0) & (m1 == 0) & (m2 == 0)))  # scaleless
+    return arrays
 
 
 def _fill(

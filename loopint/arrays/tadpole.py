@@ -100,12 +100,21 @@ def tadpole_array(
     tolerance = Tolerance.parse(rel_tolerance, relative_to)
     shape, (m,) = broadcast({"m_squared": mass_array("m_squared", m_squared)})
     invalid = check_points(shape, {"m_squared": (m, invalid_mass, MASS_RANGE)}, on_invalid)
+    arrays = tadpole_doubles(integral, conventions, m, tolerance)
+    finish(arrays, integral, conventions, lambda i: OnePoint(exact_complex(m[i])), invalid)
+    return arrays.result(integral.orders, shape, invalid)
+
+
+def tadpole_doubles(
+    integral: Integral, conventions: Conventions, m: Number, tolerance: Tolerance
+) -> Arrays:
+    """Evaluate valid points in doubles; the others are `missing`."""
     arrays = Arrays.empty(integral.orders, m.size)
     if integral.term.powers[0] > 0:
         with np.errstate(all="ignore"):
-            _fill(arrays, integral, conventions, m, logarithm_of_scale(mu_squared), tolerance)
-    finish(arrays, integral, conventions, lambda i: OnePoint(exact_complex(m[i])), invalid)
-    return arrays.result(integral.orders, shape, invalid)
+            log_mu = logarithm_of_scale(conventions.mu_squared)
+            _fill(arrays, integral, conventions, m, log_mu, tolerance)
+    return arrays
 
 
 def _fill(

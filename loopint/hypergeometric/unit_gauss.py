@@ -126,6 +126,7 @@ def gauss_table(
             (
                 bound * (radius / cauchy) ** length / (1 - radius / cauchy)
                 for cauchy, bound in zip(CAUCHY_RADII, remainders[k], strict=True)
+                if radius < cauchy
             ),
             key=lambda bound: float(bound.log().mid()),
         )

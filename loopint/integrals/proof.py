@@ -16,6 +16,7 @@ MIN_DIGITS = 5
 MAX_DIGITS = 2000
 DEFAULT_MAX_PRECISION_BITS = 20_000
 GUARD_BITS = 20
+FLOAT_BITS = 58  # a float64 and a few bits to decide how it rounds
 
 
 @dataclass(frozen=True, slots=True)
@@ -92,7 +93,8 @@ def prove(
         `proven` is False if the cap came first.
     """
     needed = bits_for_digits(digits)
-    bits = min(round_up_to_word(needed + GUARD_BITS), max_bits)
+    start = needed if accept is None else max(needed, FLOAT_BITS)  # the wish is one of floats
+    bits = min(round_up_to_word(start + GUARD_BITS), max_bits)
     wishes = 0
     while True:
         series: BallSeries | None = None

@@ -11,14 +11,16 @@ import numpy as np
 import pyarrow as pa
 
 from loopint.pipeline.cross_check import DISAGREES, Check, cross_check, sample
+from loopint.pipeline.doubles import evaluate_doubles, nothing_done, serves
 from loopint.pipeline.errors import ConfigError
-from loopint.pipeline.evaluate import RowRejectedError, evaluate_row
+from loopint.pipeline.evaluate import RowRejectedError, evaluate_row, evaluate_some
 from loopint.pipeline.manifest import table_metadata
 from loopint.pipeline.plan import plan_integrals
 from loopint.pipeline.points import exact_rows, open_points
 from loopint.pipeline.run_directory import MAX_PARTS, ChunkRecord, OutputError, RunDirectory
 from loopint.pipeline.tables import (
     TableLayout,
+    WrittenIntegral,
     check_csv_key,
     cross_check_schema,
     records_table,
@@ -28,6 +30,10 @@ from loopint.pipeline.tables import (
 )
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from numpy.typing import NDArray
+
     from loopint.pipeline.config import RunConfig
     from loopint.pipeline.plan import Cells, IntegralPlan
     from loopint.pipeline.points import PointsSource
@@ -39,10 +45,11 @@ PlacedCheck: TypeAlias = tuple[int, str, Check]  # position in the chunk, integr
 NAMED_DISAGREEMENTS = 20  # so many are named, the others only counted
 FEWEST_ROWS, MOST_ROWS = 250, 8000
 MANY_DIGITS, MOST_ROWS_WITH_MANY_DIGITS = 100, 1000  # their decimals take memory
+MOST_ROWS_IN_DOUBLES = 125_000
 CHUNKS = 32  # enough for even loads, if they are not too small
 
 
-def default_chunk_rows(row_count: int, digits: int) -> int:
+def default_chunk_rows(row_count: int, digits: int, in_doubles: bool = False) -> int:
     """Return how many rows make a chunk, by default.
 
     Depends on what the table depends on, never on the number of workers.
@@ -51,8 +58,12 @@ def default_chunk_rows(row_count: int, digits: int) -> int:
     --------
     >>> [default_chunk_rows(rows, 16) for rows in (10, 2_000, 100_000, 10**7)]
     [250, 250, 3125, 8000]
+    >>> default_chunk_rows(10**7, 12, in_doubles=True)
+    125000
     """
     most = MOST_ROWS if digits <= MANY_DIGITS else MOST_ROWS_WITH_MANY_DIGITS
+    if in_doubles:
+        most = MOST_ROWS_IN_DOUBLES
     return max(FEWEST_ROWS, min(most, -(-row_count // CHUNKS)), -(-row_count // MAX_PARTS))
 
 
@@ -115,14 +126,16 @@ def open_run(config: RunConfig, source: PointsSource | None = None) -> OpenedRun
         layout,
         rejected_schema(key),
         cross_check_schema(key),
-        _chunk_rows(config, source.row_count),
+        _chunk_rows(config, plans, source.row_count),
     )
 
 
-def _chunk_rows(config: RunConfig, row_count: int) -> int:
+def _chunk_rows(config: RunConfig, plans: Sequence[IntegralPlan], row_count: int) -> int:
     chosen = config.execution.chunk_rows
     if chosen is None:
-        return default_chunk_rows(row_count, config.accuracy.digits)
+        digits = config.accuracy.digits
+        in_doubles = all(serves(plan, digits) for plan in plans)
+        return default_chunk_rows(row_count, digits, in_doubles)
     if row_count > chosen * MAX_PARTS:
         raise ConfigError(
             f"{config.where}[execution] chunk_rows = {chosen} makes more than {MAX_PARTS} files of "
@@ -149,11 +162,12 @@ class Block:
     keys: pa.Array
     table: pa.Table
 
-    def cells(self) -> list[Cells]:
-        """Return the exact values of each row."""
+    def cells(self, positions: NDArray[np.intp] | None = None) -> list[Cells]:
+        """Return the exact values of each row, or of the rows at some positions."""
         if not self.table.num_columns:
-            return [{}] * len(self.keys)
-        return list(exact_rows(self.table, self.table.column_names))
+            return [{}] * (len(self.keys) if positions is None else len(positions))
+        table = self.table if positions is None else self.table.take(pa.array(positions))
+        return list(exact_rows(table, table.column_names))
 
 
 class RowReader:
@@ -193,15 +207,77 @@ class ChunkResults:
     """
 
     integrals: list[IntegralColumns]
-    accepted: list[int] = field(default_factory=list)
+    accepted: list[int] | NDArray[np.intp] = field(default_factory=list)
     refused: list[tuple[int, RowRejectedError]] = field(default_factory=list)
     checks: list[PlacedCheck] = field(default_factory=list)
 
 
 def evaluate_block(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkResults:
+    """Evaluate and cross-check rows: whole columns in doubles, or one after the other."""
+    if any(serves(plan, config.accuracy.digits) for plan in opened.plans):
+        return _evaluate_columns(config, opened, block)
+    return _evaluate_rows(config, opened, block)
+
+
+def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkResults:
+    """Evaluate what doubles serve in doubles, and the remaining rows and integrals in balls."""
+    accuracy, check, count = config.accuracy, config.cross_check, len(block.keys)
+    digits = accuracy.digits
+    found = [
+        evaluate_doubles(plan, block.table, count, digits)
+        if serves(plan, digits)
+        else nothing_done(plan, count)
+        for plan in opened.plans
+    ]
+    sampled = [
+        sample(check.seed, plan.name, block.start, count, check.fraction) for plan in opened.plans
+    ]
+    needed = np.zeros(count, dtype=bool)
+    for one, chosen in zip(found, sampled, strict=True):
+        needed |= ~one.done | chosen
+    positions = np.flatnonzero(needed)
+    results = ChunkResults([])
+    others: list[dict[int, WrittenIntegral]] = [{} for _ in found]
+    for position, cells in zip(positions.tolist(), block.cells(positions), strict=True):
+        wanted = [
+            place
+            for place, (one, chosen) in enumerate(zip(found, sampled, strict=True))
+            if chosen[position] or not one.done[position]
+        ]
+        try:
+            row = evaluate_some(
+                opened.plans,
+                cells,
+                wanted,
+                digits=digits,
+                max_precision_bits=accuracy.max_precision_bits,
+            )
+        except RowRejectedError as error:
+            results.refused.append((position, error))
+            continue
+        for place, computed in row.items():
+            if found[place].done[position]:
+                written = found[place].written(position)
+            else:
+                written = others[place][position] = write_integral(computed, digits)
+            if sampled[place][position]:
+                checks = cross_check(
+                    computed, written, digits=check.digits, arithmetic=check.arithmetic
+                )
+                results.checks += [(position, computed.name, each) for each in checks]
+    accepted = np.ones(count, dtype=bool)
+    accepted[[position for position, _ in results.refused]] = False
+    rows = np.flatnonzero(accepted)
+    results.accepted = rows
+    results.integrals = [one.columns(rest, rows) for one, rest in zip(found, others, strict=True)]
+    return results
+
+
+def _evaluate_rows(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkResults:
     """Evaluate and cross-check rows one after the other."""
     accuracy, check = config.accuracy, config.cross_check
-    results = ChunkResults(opened.layout.columns())
+    accepted: list[int] = []
+    results = ChunkResults(opened.layout.columns(), accepted)
     sampled = [
         sample(check.seed, plan.name, block.start, len(block.keys), check.fraction).tolist()
         for plan in opened.plans
@@ -217,7 +293,7 @@ def evaluate_block(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkR
         except RowRejectedError as error:
             results.refused.append((position, error))
             continue
-        results.accepted.append(position)
+        accepted.append(position)
         for computed, columns, chosen in zip(row, results.integrals, sampled, strict=True):
             written = write_integral(computed, accuracy.digits)
             columns.append(written)

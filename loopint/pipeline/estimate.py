@@ -10,8 +10,9 @@ from typing import TYPE_CHECKING, Any
 
 import pyarrow as pa
 
-from loopint.pipeline.chunks import OpenedRun, RowReader, open_run
+from loopint.pipeline.chunks import OpenedRun, RowReader, evaluate_block, open_run
 from loopint.pipeline.cross_check import cross_check
+from loopint.pipeline.doubles import serves
 from loopint.pipeline.engines import run_tasks
 from loopint.pipeline.evaluate import RowRejectedError, evaluate_row, row_requests
 from loopint.pipeline.run import worker_count
@@ -28,6 +29,7 @@ if TYPE_CHECKING:
 
 SAMPLED_ROWS = 20
 CHECKED_ROWS = 5
+COLUMN_ROWS = 2000
 SHOWN_REJECTIONS = 10
 PARALLEL_ROWS = 100_000
 START_SECONDS = 1.0  # starting the worker processes
@@ -140,6 +142,8 @@ def survey_config(config: RunConfig, *, progress: Progress | None = None) -> Sur
             regions[name].update(counts)
     rejections = [rejection for chunk in chunks for rejection in chunk.rejections]
     row_seconds, check_seconds = _time_sample(config, opened)
+    if any(serves(plan, config.accuracy.digits) for plan in plans):
+        row_seconds = _time_columns(config, opened)
     checks = round(good * len(plans) * float(config.cross_check.share))
     workers = min(worker_count(config), len(chunks))
     busy = good * row_seconds + checks * check_seconds
@@ -173,6 +177,19 @@ def _classify(
         if progress is not None:
             progress(done, source.row_count)
     return sorted(found, key=lambda chunk: chunk.index)
+
+
+def _time_columns(config: RunConfig, opened: OpenedRun) -> float:
+    """Return seconds per row where whole columns are evaluated, from consecutive rows."""
+    count = min(opened.source.row_count, COLUMN_ROWS)
+    block = RowReader(opened).read((opened.source.row_count - count) // 2, count)
+    unchecked = config.cross_check.model_copy(update={"fraction": "none"})
+    config = config.model_copy(update={"cross_check": unchecked})
+    evaluate_block(config, opened, block)  # fills the tables that all points share
+    started = time.perf_counter()
+    results = evaluate_block(config, opened, block)
+    opened.layout.build(block.keys.take(pa.array(results.accepted, pa.int64())), results.integrals)
+    return (time.perf_counter() - started) / count
 
 
 def _time_sample(config: RunConfig, opened: OpenedRun) -> tuple[float, float]:

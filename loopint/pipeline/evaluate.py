@@ -10,7 +10,7 @@ from loopint.core.numbers import imaginary_part, real_part, rounds_uniquely
 from loopint.integrals import registry
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Iterable, Sequence
 
     from loopint.core.laurent import BallSeries
     from loopint.integrals.proof import Evaluation
@@ -67,14 +67,31 @@ def row_requests(plans: Sequence[IntegralPlan], cells: Cells) -> list[RowRequest
 def evaluate_row(
     plans: Sequence[IntegralPlan], cells: Cells, *, digits: int, max_precision_bits: int
 ) -> list[Computed]:
-    """Evaluate every integral of a row.
+    """Evaluate every integral of a row; see `evaluate_some`."""
+    found = evaluate_some(
+        plans, cells, range(len(plans)), digits=digits, max_precision_bits=max_precision_bits
+    )
+    return list(found.values())
+
+
+def evaluate_some(
+    plans: Sequence[IntegralPlan],
+    cells: Cells,
+    wanted: Iterable[int],
+    *,
+    digits: int,
+    max_precision_bits: int,
+) -> dict[int, Computed]:
+    """Evaluate some integrals of a row, by their place in the plans.
 
     Parameters
     ----------
     plans
-        The integrals.
+        All integrals.
     cells
         Exact value, or the error, of every cell the plans use.
+    wanted
+        Places of the integrals to be evaluated; the kinematics of the others are checked too.
     digits, max_precision_bits
         See `loopint.integrals.registry.evaluate`; on top of the digits the coefficients are proven
         far enough to have one nearest float64.
@@ -84,10 +101,11 @@ def evaluate_row(
     RowRejectedError
         If one of the integrals cannot be evaluated: the row is then rejected as a whole.
     """
-    return [
-        Computed(request, _evaluate(request, digits, max_precision_bits))
-        for request in row_requests(plans, cells)
-    ]
+    requests = row_requests(plans, cells)
+    return {
+        place: Computed(requests[place], _evaluate(requests[place], digits, max_precision_bits))
+        for place in wanted
+    }
 
 
 def _evaluate(request: RowRequest, digits: int, max_precision_bits: int) -> Evaluation:

@@ -16,7 +16,7 @@ import operator
 import re
 import warnings
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, TypeAlias
+from typing import TYPE_CHECKING, Any, TypeAlias
 
 from flint import fmpq
 
@@ -86,6 +86,13 @@ class Expression:
             longest = max(values[column].height_bits() for column in self.columns)
             _check_size(node.offset + node.degree * longest, self.text)
         return node.compute(values)
+
+    def compute(self, columns: Mapping[str, Any]) -> Any:  # noqa: ANN401 - any arithmetic type
+        """Return the value for columns of a type with arithmetic, such as `ExactDoubles`.
+
+        A constant expression is an `fmpq` whatever the columns.
+        """
+        return self._node.compute(columns)
 
     def __reduce__(self) -> tuple[Callable[[str], Expression], tuple[str]]:
         return parse_expression, (self.text,)  # closures do not pickle

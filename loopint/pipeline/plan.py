@@ -19,12 +19,14 @@ from loopint.core.kinematics import (
 )
 from loopint.core.numbers import ZERO, ExactComplex, exact_real
 from loopint.pipeline.errors import ConfigError
+from loopint.pipeline.exact_doubles import ExactDoubles
 
 if TYPE_CHECKING:
     from loopint.integrals.registry import Integral
     from loopint.pipeline.config import MassKeys, RunConfig
     from loopint.pipeline.expressions import Expression
     from loopint.pipeline.points import PointsSource
+LineColumns: TypeAlias = tuple[ExactDoubles, ExactDoubles | None]  # Re and Im of m^2
 Values: TypeAlias = Mapping[str, fmpq]
 Cells: TypeAlias = Mapping[str, fmpq | InputError]
 
@@ -51,6 +53,11 @@ class _Quantity:
     def columns(self) -> frozenset[str]:
         return self.expression.columns
 
+    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> ExactDoubles:
+        """Evaluate in all rows at once."""
+        found = self.expression.compute(columns)
+        return found if isinstance(found, ExactDoubles) else ExactDoubles.constant(found, rows)
+
     def real(self, values: Values) -> fmpq:
         try:
             return self.expression.evaluate(values)
@@ -74,6 +81,9 @@ class _SquaredMass:
         if self.im and not self.im.columns:
             check_mass_squared(ExactComplex(ZERO, self.im.real({})), self.re.key)
 
+    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> LineColumns:
+        return self.re.over(columns, rows), self.im.over(columns, rows) if self.im else None
+
     def value(self, values: Values) -> ExactComplex:
         im = self.im.real(values) if self.im else ZERO
         return check_mass_squared(ExactComplex(self.re.real(values), im), self.re.key)
@@ -96,6 +106,13 @@ class _MassAndWidth:
             if quantity and not quantity.columns:
                 _not_negative(quantity, {})
 
+    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> LineColumns:
+        mass = _where_not_negative(self.mass.over(columns, rows))
+        if self.width is None:
+            return mass * mass, None
+        width = _where_not_negative(self.width.over(columns, rows))
+        return mass * mass, -(mass * width)
+
     def value(self, values: Values) -> ExactComplex:
         mass = _not_negative(self.mass, values)
         width = _not_negative(self.width, values) if self.width else ZERO
@@ -107,6 +124,10 @@ class _FixedMass:
     """A line that is the same in every row."""
 
     squared: ExactComplex
+
+    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> LineColumns:  # noqa: ARG002
+        re = ExactDoubles.constant(self.squared.re, rows)
+        return re, None if self.squared.is_real else ExactDoubles.constant(self.squared.im, rows)
 
     def value(self, values: Values) -> ExactComplex:  # noqa: ARG002 - same call as the others
         return self.squared
@@ -138,6 +159,28 @@ class IntegralPlan:
     _mu_squared: _Quantity
     _tolerance: fmpq
     _conventions: Conventions
+
+    @property
+    def has_fixed_conventions(self) -> bool:
+        """Whether mu^2 is the same in every row."""
+        return not self._mu_squared.columns
+
+    @property
+    def fixed_conventions(self) -> Conventions:
+        """The conventions if mu^2 is the same in every row."""
+        return self._conventions
+
+    @property
+    def snaps(self) -> bool:
+        """Whether points may be moved onto a threshold."""
+        return bool(self._tolerance)
+
+    def over(
+        self, columns: Mapping[str, ExactDoubles], rows: int
+    ) -> tuple[ExactDoubles | None, list[LineColumns]]:
+        """Return p^2 (None for a tadpole) and the squared masses of all rows, unchecked."""
+        p_squared = None if self._p_squared is None else self._p_squared.over(columns, rows)
+        return p_squared, [line.over(columns, rows) for line in self._lines]
 
     def point(self, cells: Cells) -> OnePoint | TwoPoint:
         """Return the exact kinematic point of a row.
@@ -242,6 +285,11 @@ def _line(quantities: Mapping[str, _Quantity], keys: MassKeys, where: str) -> Li
         return line if line.columns else _FixedMass(line.value({}))
     except InputError as error:
         raise ConfigError(f"{where} {error}") from None
+
+
+def _where_not_negative(column: ExactDoubles) -> ExactDoubles:
+    """Leave rows with a negative mass or width to the arithmetic that rejects them."""
+    return ExactDoubles(column.value, column.exact & (column.value >= 0))
 
 
 def _not_negative(quantity: _Quantity, values: Values) -> fmpq:

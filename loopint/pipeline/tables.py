@@ -42,8 +42,8 @@ COLUMN_MEANINGS = {
     "row": "0-based row of the source, counted over all its files",
     "integral": "name of the integral in the config",
     "order": "power of epsilon",
-    "re": "real part, the nearest float64",
-    "im": "imaginary part, the nearest float64; exactly 0 where it vanishes",
+    "re": "real part, the nearest float64; with method double a float64 within re_bound",
+    "im": "imaginary part, as re; exactly 0 where it vanishes",
     "re_bound": "|true real part - re| is at most this: proven, rounding included",
     "im_bound": "|true imaginary part - im| is at most this: proven, rounding included",
     "re_decimal": "real part as a decimal string; re_decimal + i im_decimal is within "
