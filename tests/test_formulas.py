@@ -513,8 +513,8 @@ def test_a_point_outside_the_domain_is_refused():
 @pytest.mark.parametrize(
     ("keywords", "message"),
     [
-        ({"family": "triangle"}, "accepted: tadpole, bubble"),
-        ({"family": "propagator"}, "accepted: tadpole, bubble"),
+        ({"family": "triangle"}, "accepted: tadpole, bubble, propagator"),
+        ({"family": "propagator"}, "accepted: tadpole, bubble, propagator"),
         ({"family": "bubble", "kinematics": "equal"}, "accepted: general, equal_mass"),
         ({"family": "tadpole", "kinematics": "equal_mass"}, "accepted: general"),
         ({"family": "bubble", "orders": (-1, 9)}, "highest <= 8"),
@@ -546,7 +546,7 @@ def test_command_prints_the_formula(form, monkeypatch, capsys):
         (["bubble", "--format", "word"], "accepted: text, latex, python, sympy"),
         (["bubble", "--powers", "1,x"], "accepted: integers separated by commas"),
         (["bubble", "--orders", "1"], "accepted: lowest,highest"),
-        (["box"], "accepted: tadpole, bubble"),
+        (["box"], "accepted: tadpole, bubble, propagator"),
     ],
 )
 def test_command_refuses_in_one_sentence(arguments, message, monkeypatch, capsys):

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import product
 from math import comb, factorial
 
 import numpy as np
@@ -82,6 +83,8 @@ class EndTables:
         F N as a function of t, and its derivative.
     root
         With the key (b, plus, minus): F {b B + S [plus exp(i pi eps) + minus exp(-i pi eps)]}.
+    above
+        F {B exp(i pi eps) + n S} for n = 0, 1, 2.
     """
 
     far: EndTable
@@ -89,6 +92,7 @@ class EndTables:
     near: EndTable
     near_slope: EndTable
     root: dict[tuple[int, int, int], Constants]
+    above: tuple[Constants, ...]
 
 
 @lru_cache(maxsize=32)
@@ -109,7 +113,14 @@ def end_tables(measure: Measure, highest: int, real: bool) -> EndTables:
                 shapes.append(_on_interval(pieces, *interval) if real else _on_disc(pieces, disc))
         between = [real_part(tables.between_roots[k]) for k in range(highest + 1)]
         singular = [real_part(tables.singular[k]) for k in range(highest + 1)]
-        return EndTables(shapes[0], shapes[1], shapes[2], shapes[3], _roots(between, singular))
+        return EndTables(
+            shapes[0],
+            shapes[1],
+            shapes[2],
+            shapes[3],
+            _roots(between, singular),
+            _above(between, singular),
+        )
 
 
 Piece = tuple[list[arb], float, arb]
@@ -151,7 +162,9 @@ def _piece(row: Piece | tuple[list[arb], arb]) -> Piece:
     return row if len(row) == 3 else (row[0], SERIES_RADIUS, row[1])
 
 
-def _on_interval(rows: list[Piece] | list[tuple[list[arb], arb]], low: float, high: float) -> EndTable:
+def _on_interval(
+    rows: list[Piece] | list[tuple[list[arb], arb]], low: float, high: float
+) -> EndTable:
     """Cut polynomials for low <= x <= high."""
     centre = round((low + high) * 32) / 64
     half = max(high - centre, centre - low)
@@ -222,7 +235,7 @@ def _rounded(
         slope = sum(n * abs(c) * radius ** (n - 1) for n, c in enumerate(rounded) if n)
         error = sum((step * n + 2) * term for n, term in enumerate(terms))
         error += float(dropped) / UNIT + (slope * radius if centre else 0.0)
-        size = 1.001 * sum(terms)
+        size = max(1.001 * sum(terms), float(dropped) / UNIT)
         sizes.append(size)
         if size > 0:
             errors.append(1.001 * error / size)
@@ -238,16 +251,29 @@ def _roots(between: list[arb], singular: list[arb]) -> dict[tuple[int, int, int]
         sum((singular[k - j] * turn[j] for j in range(k + 1)), start=acb(0)) for k in range(length)
     ]
     result = {}
-    for b in (-1, 0, 1):
-        for p in range(-2, 3):
-            for m in range(-2, 3):
-                if abs(p) + abs(m) > 2:
-                    continue
-                rows = [
-                    b * between[k] + p * plus[k] + m * plus[k].conjugate() for k in range(length)
-                ]
-                if b == p == m:  # B + 2 S cos(pi eps) = 0 exactly
-                    rows = [acb(0)] * length
-                values = tuple(complex(float(c.real.mid()), float(c.imag.mid())) for c in rows)
-                result[b, p, m] = Constants(values, tuple(abs(value) for value in values))
+    for b, p, m in product((-1, 0, 1), range(-2, 3), range(-2, 3)):
+        rows = [b * between[k] + p * plus[k] + m * plus[k].conjugate() for k in range(length)]
+        result[b, p, m] = _constants(rows)
     return result
+
+
+def _above(between: list[arb], singular: list[arb]) -> tuple[Constants, ...]:
+    """Return B exp(i pi eps) + n S for n = 0, 1, 2."""
+    length = len(between)
+    turn = [acb(0, arb.pi()) ** k / factorial(k) for k in range(length)]
+    turned = [
+        sum((between[k - j] * turn[j] for j in range(k + 1)), start=acb(0)) for k in range(length)
+    ]
+    return tuple(
+        _constants([x + n * y for x, y in zip(turned, singular, strict=True)]) for n in range(3)
+    )
+
+
+def _constants(rows: list[acb]) -> Constants:
+    """Round; what vanishes (B + 2 S cos(pi eps) = 0) shows as a tiny ball."""
+    values = tuple(complex(_rounded_real(c.real), _rounded_real(c.imag)) for c in rows)
+    return Constants(values, tuple(1.001 * abs(value) for value in values))
+
+
+def _rounded_real(x: arb) -> float:
+    return 0.0 if x.contains(0) else float(x.mid())

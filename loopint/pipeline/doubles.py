@@ -70,6 +70,8 @@ class DoubleResults:
         By order, for all rows.
     regions
         Codes of `REGIONS`.
+    real
+        The rows that are done and whose imaginary parts vanish exactly.
     """
 
     name: str
@@ -78,12 +80,7 @@ class DoubleResults:
     values: Mapping[int, NDArray[np.complex128]]
     bounds: Mapping[int, Real]
     regions: NDArray[np.int8]
-
-    def is_real(self) -> Mask:
-        """Return the rows whose imaginary parts vanish exactly."""
-        real: Mask = self.done & (self.regions != CODE[Region.ABOVE_THRESHOLD])
-        real &= self.regions != CODE[Region.COMPLEX_MASS]
-        return real
+    real: Mask
 
     def digits(self, order: int) -> tuple[NDArray[np.int16], Mask]:
         """Return proven digits as in `tables.proven_digits`, and where the value is exact."""
@@ -96,7 +93,7 @@ class DoubleResults:
 
     def written(self, row: int) -> WrittenIntegral:
         """Return a row that is done as it stands in the table."""
-        real = bool(self.is_real()[row])
+        real = bool(self.real[row])
         numbers = []
         for order in range(self.orders[0], self.orders[1] + 1):
             value, bound = self.values[order][row], float(self.bounds[order][row])
@@ -124,7 +121,6 @@ class DoubleResults:
         columns = IntegralColumns(self.name, self.orders)
         places = np.array(sorted(others), dtype=np.intp)
         rest = [others[int(place)] for place in places]
-        real = self.is_real()
         for index, order in enumerate(columns.orders):
             value, bound = self.values[order], self.bounds[order]
             digits, exact = self.digits(order)
@@ -132,7 +128,7 @@ class DoubleResults:
                 "re": value.real.copy(),
                 "im": value.imag.copy(),
                 "re_bound": bound.copy(),
-                "im_bound": np.where(real, 0.0, bound),
+                "im_bound": np.where(self.real, 0.0, bound),
             }
             for name, column in found.items():
                 column[places] = [getattr(one.numbers[index], name) for one in rest]
@@ -183,6 +179,7 @@ def nothing_done(plan: IntegralPlan, rows: int) -> DoubleResults:
         {k: np.zeros(rows, dtype=np.complex128) for k in span},
         {k: np.zeros(rows) for k in span},
         np.zeros(rows, dtype=np.int8),
+        np.zeros(rows, dtype=bool),
     )
 
 
@@ -221,8 +218,11 @@ def evaluate_doubles(plan: IntegralPlan, table: pa.Table, rows: int, digits: int
             tolerance,
         )
     done = usable & ~arrays.missing
+    real = done & (regions != CODE[Region.ABOVE_THRESHOLD])
+    for mass in masses:
+        real &= np.imag(mass) == 0
     return DoubleResults(
-        plan.name, plan.integral.orders, done, arrays.values, arrays.bounds, regions
+        plan.name, plan.integral.orders, done, arrays.values, arrays.bounds, regions, real
     )
 
 
