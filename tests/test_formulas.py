@@ -514,7 +514,6 @@ def test_a_point_outside_the_domain_is_refused():
     ("keywords", "message"),
     [
         ({"family": "triangle"}, "accepted: tadpole, bubble, propagator"),
-        ({"family": "propagator"}, "accepted: tadpole, bubble, propagator"),
         ({"family": "bubble", "kinematics": "equal"}, "accepted: general, equal_mass"),
         ({"family": "tadpole", "kinematics": "equal_mass"}, "accepted: general"),
         ({"family": "bubble", "orders": (-1, 9)}, "highest <= 8"),

@@ -460,7 +460,9 @@ def _near_end(work: Work, block: Block, i: int, sigma: Real) -> Sum:
     rho = max(tables.near.slope, tables.near_slope.slope) * t_error
     rho += max(tables.near.error, tables.near_slope.error) + c_error + GROWTH * work.highest + 8.0
     if work.variable is Variable.NONE:
-        return _evaluate(work, block, m, pair, t, Factors(c, None, None, (size(c) * rho, None, None)))
+        return _evaluate(
+            work, block, m, pair, t, Factors(c, None, None, (size(c) * rho, None, None))
+        )
     rho += chi_error + block.root_error + 4.0 * (block.quotient + block.product)
     growth = quotient(chi, signed) * c
     zero = np.zeros_like(p)
@@ -495,9 +497,7 @@ def _height(block: Block) -> Number:
     return height
 
 
-def _with_root(
-    work: Work, block: Block, total: Sum, cases: list[tuple[Index, Constants]]
-) -> Sum:
+def _with_root(work: Work, block: Block, total: Sum, cases: list[tuple[Index, Constants]]) -> Sum:
     """Add (R/p^2)(-lambda/p^2)^(-eps) times constants where they apply."""
     for index, constants in cases:
         if index.size == 0:
