@@ -70,8 +70,29 @@ def run(
     except KeyboardInterrupt:
         typer.echo("loopint: interrupted; the same command continues", err=True)
         raise typer.Exit(INTERRUPTED) from None
-    show_run(outcome)
+    show_run(outcome, _try_report(outcome.directory))
     raise typer.Exit(outcome.exit_code)
+
+
+def _try_report(directory: Path) -> Path | None:
+    """Write the page of a run; a run is not less finished without it."""
+    from loopint.report import write_report
+
+    try:
+        return write_report(directory)
+    except (LoopintError, OSError, ArithmeticError, LookupError, ValueError, TypeError) as error:
+        typer.echo(f"loopint: the run is complete, but report.html is not: {error}", err=True)
+        return None
+
+
+@app.command(epilog="Example: loopint report runs/quickstart")
+def report(
+    run: Annotated[Path, typer.Argument(metavar="RUN", help="Directory of a finished run.")],
+) -> None:
+    """Write report.html of a finished run again, from its files."""
+    from loopint.report import write_report
+
+    typer.echo(str(write_report(run)))
 
 
 @app.command(epilog="Example: loopint validate configs/quickstart.toml")

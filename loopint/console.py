@@ -22,6 +22,7 @@ from rich.text import Text
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator
+    from pathlib import Path
 
     from loopint.formulas.formula import Formula
     from loopint.pipeline.estimate import Survey
@@ -68,7 +69,7 @@ def progress_bar(action: str) -> Iterator[Callable[[int, int], None] | None]:
         yield update
 
 
-def show_run(outcome: RunOutcome) -> None:
+def show_run(outcome: RunOutcome, report: Path | None = None) -> None:
     """Print the account of a run on stdout, and what needs attention on stderr."""
     out, summary, checks = _stdout(), outcome.summary, outcome.summary["cross_check"]
     table = Table(box=box.SIMPLE, title=escape(summary["title"]) or None, title_justify="left")
@@ -98,6 +99,8 @@ def show_run(outcome: RunOutcome) -> None:
         f"{summary['elapsed_seconds']:.1f} s with {summary['workers']} worker(s)"
         f"{resumed if summary['rows_resumed'] else ''}; results in {escape(str(outcome.directory))}"
     )
+    if report is not None:
+        out.print(f"to look at: {escape(str(report))}")
     _show_attention(outcome)
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import TYPE_CHECKING
@@ -10,6 +10,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from loopint.arrays.end_tables import end_tables
+from loopint.arrays.ends import GROUPED, Block, Variable, Work, plain_block, precise_block
+from loopint.arrays.ends import expand as expand_ends
 from loopint.arrays.evaluate import (
     BLOCK,
     DEFAULT_TOLERANCE,
@@ -62,6 +65,7 @@ class Recipe:
     lowest: int
     prefactor: list[float]
     sign: int
+    measure: Measure
 
 
 def recipe(integral: Integral, conventions: Conventions) -> Recipe | None:
@@ -87,7 +91,7 @@ def recipe(integral: Integral, conventions: Conventions) -> Recipe | None:
     master, sign = found
     lowest = -1 if master is Master.J else 0
     prefactor = _prefactor(conventions.measure, lowest, integral.orders[1])
-    return Recipe(master, lowest, prefactor, sign)
+    return Recipe(master, lowest, prefactor, sign, conventions.measure)
 
 
 @lru_cache(maxsize=64)
@@ -227,7 +231,9 @@ def _fill(
     p, m1, m2 = kinematics
     if np.iscomplexobj(m1) or np.iscomplexobj(m2):
         real = (m1.imag == 0) & (m2.imag == 0)
-        _fill_general(arrays, plan, np.flatnonzero(~real), kinematics, log_mu, tolerance)
+        index = np.flatnonzero(~real)
+        index = _fill_by_ends(arrays, plan, index, kinematics, log_mu, tolerance)
+        _fill_general(arrays, plan, index, kinematics, log_mu, tolerance)
         index = np.flatnonzero(real)
         kinematics = (p, np.real(m1), np.real(m2))
     else:
@@ -241,7 +247,91 @@ def _fill(
             _fill_with_logarithms(arrays, plan, index, kinematics, log_mu, tolerance)
             index = index[arrays.missing[index]]
             arrays.values[0][index] = 0.0
+    index = _fill_by_ends(arrays, plan, index, kinematics, log_mu, tolerance)
     _fill_general(arrays, plan, index, kinematics, log_mu, tolerance)
+
+
+def _fill_by_ends(
+    arrays: Arrays,
+    plan: Recipe,
+    index: NDArray[np.intp],
+    kinematics: tuple[Real, Number, Number],
+    log_mu: float,
+    tolerance: Tolerance,
+) -> NDArray[np.intp]:
+    """Evaluate with `loopint.arrays.ends`; return where that missed the tolerance.
+
+    Plain doubles serve most real points of B(1,1); derivatives near lambda = 0 need more of it.
+    """
+    p, m1, m2 = kinematics
+    real = not (np.iscomplexobj(m1) or np.iscomplexobj(m2))
+    variable, sign = Variable.NONE, float(plan.sign)
+    if plan.master is Master.P:
+        variable = Variable.MOMENTUM
+    elif plan.master is not Master.J:
+        variable, sign = Variable.MASS, -sign
+    if plan.master is Master.M2:
+        m1, m2 = m2, m1
+    highest = len(plan.prefactor) - (1 if plan.master is Master.J else 0)
+    within = log_mu if variable is Variable.NONE else 0.0
+    work = Work(variable, highest, within, end_tables(plan.measure, highest, real))
+    leading = abs(plan.prefactor[0]) if plan.master is Master.J else 0.0
+    arrays.missing[index] = True
+    passes: list[Callable[[Real, Number, Number], Block]] = [precise_block]
+    if real and variable is Variable.NONE:
+        passes.insert(0, plain_block)
+    for derive in passes:
+        for start in range(0, index.size, GROUPED):
+            where = index[start : start + GROUPED]
+            usable = ~(
+                _far_from_one(p[where]) | _far_from_one(m1[where]) | _far_from_one(m2[where])
+            )
+            where = where if usable.all() else where[usable]
+            if where.size == 0:
+                continue
+            block = p[where], m1[where], m2[where]
+            if variable is Variable.NONE:
+                groups = expand_ends(work, derive(*block))
+            else:
+                groups = _in_own_units(work, block, log_mu)
+            for group, series in groups:
+                if sign != 1.0:
+                    for value in series.values:
+                        value *= sign
+                arrays.store(where[group], 0, series, tolerance, leading)
+        index = index[arrays.missing[index]]
+        for order, value in arrays.values.items():
+            if order >= 0:
+                value[index] = 0.0  # real series leave imaginary parts alone
+    return index
+
+
+def _in_own_units(
+    work: Work, block: tuple[Real, Number, Number], log_mu: float
+) -> Iterator[tuple[NDArray[np.intp], ArraySeries]]:
+    """Evaluate derivatives at points scaled by powers of two to a mass near 1: logarithms cost least."""
+    largest = np.maximum(np.abs(block[1]), np.abs(block[2]))
+    largest = np.where(largest == 0, np.abs(block[0]), largest)
+    exponent = np.frexp(largest * np.sqrt(0.5))[1]
+    factor = np.ldexp(1.0, -exponent)
+    scale = exponent * LOG_TWO
+    shift: Real = np.asarray(log_mu - scale, dtype=np.float64)
+    shift_error = 2.0 * np.abs(scale) + abs(log_mu) + np.abs(shift)
+    one = [1.0] + [0.0] * (work.highest - 1)
+    scaled = precise_block(block[0] * factor, block[1] * factor, block[2] * factor)
+    for group, series in expand_ends(work, scaled):
+        result = series.times(constants_times_exponential(one, shift[group], shift_error[group]))
+        for value, error in zip(result.values, result.errors, strict=True):
+            value *= factor[group]
+            error *= factor[group]
+        yield group, result
+
+
+def _far_from_one(array: Number) -> NDArray[np.bool_]:
+    """Mark entries that are neither zero nor within 2^+-200."""
+    sizes = np.abs(array)
+    far: NDArray[np.bool_] = ~(((sizes > 1 / PLAIN_RANGE) & (sizes < PLAIN_RANGE)) | (sizes == 0))
+    return far
 
 
 def _fill_general(

@@ -45,7 +45,7 @@ class ExactDoubles:
         number = fmpq(number)
         value = nearest_double(number)
         exact = value is not None and fmpq(*value.as_integer_ratio()) == number
-        return cls(np.full(rows, value if exact else np.nan), np.full(rows, exact))
+        return cls(np.full(rows, np.nan if value is None else value), np.full(rows, exact))
 
     def _other(self, other: object) -> ExactDoubles | None:
         if isinstance(other, ExactDoubles):
