@@ -21,6 +21,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
 )
 UNUSABLE = 2
+ATTENTION = 3
 INTERRUPTED = 130
 CONFIG = Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file of the run.")]
 
@@ -83,6 +84,41 @@ def _try_report(directory: Path) -> Path | None:
     except (LoopintError, OSError, ArithmeticError, LookupError, ValueError, TypeError) as error:
         typer.echo(f"loopint: the run is complete, but report.html is not: {error}", err=True)
         return None
+
+
+@app.command(epilog="Example: loopint grid configs/compare.toml")
+def grid(
+    config: CONFIG,
+    overwrite: Annotated[
+        bool, typer.Option("--overwrite", help="Replace a file that does not hold this grid.")
+    ] = False,
+) -> None:
+    """Write the points of [grid] to the file of [points]."""
+    from loopint.console_grid import show_grid
+    from loopint.pipeline.config import GridRunConfig, load_config_as
+    from loopint.pipeline.grid import write_grid
+
+    show_grid(write_grid(load_config_as(GridRunConfig, config), overwrite=overwrite))
+
+
+@app.command(epilog="Example: loopint compare configs/compare.toml")
+def compare(
+    config: CONFIG,
+    as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
+) -> None:
+    """Compare your own formulas or numbers with proven coefficients, region by region."""
+    from loopint.console import progress_bar
+    from loopint.console_compare import comparisons_as_dict, show_comparisons
+    from loopint.pipeline.compare import compare_config
+    from loopint.pipeline.config import load_config
+
+    with progress_bar("comparing") as progress:
+        outcomes, path = compare_config(load_config(config), progress=progress)
+    if as_json:
+        typer.echo(json.dumps(comparisons_as_dict(outcomes, path), indent=2))
+    else:
+        show_comparisons(outcomes, path)
+    raise typer.Exit(0 if all(outcome.agrees for outcome in outcomes) else ATTENTION)
 
 
 @app.command(epilog="Example: loopint report runs/quickstart")

@@ -107,6 +107,11 @@ def open_run(config: RunConfig, source: PointsSource | None = None) -> OpenedRun
         If they do not.
     """
     if source is None:
+        if config.grid is not None and not config.points.file.exists():
+            raise ConfigError(
+                f"{config.points.file} does not exist yet; accepted: the same config with "
+                "`loopint grid`, which writes it"
+            )
         source = open_points(config.points.file, config.points.key)
     plans = plan_integrals(config, source)
     key = None if config.points.key is None else source.schema.field(config.points.key)

@@ -473,7 +473,7 @@ def load_config_as(kind: type[AnyKind], path: Path) -> AnyKind:
     return config
 
 
-def config_as_dict(config: RunConfig) -> dict[str, Any]:
+def config_as_dict(config: AnyConfig) -> dict[str, Any]:
     """Return the config as JSON-able data with every default filled in.
 
     Expressions, decimals and paths are strings; keys that were not given and have no default are
@@ -495,6 +495,8 @@ def _jsonable(value: object) -> Any:  # noqa: ANN401 - JSON
             return format(value.normalize(), "f") if value else "0"
         case Path():
             return value.as_posix()
+        case dict():
+            return {key: _jsonable(item) for key, item in value.items()}
         case tuple():
             return [_jsonable(item) for item in value]
         case str():
