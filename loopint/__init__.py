@@ -17,14 +17,24 @@ if TYPE_CHECKING:
     from loopint.arrays.bubble import bubble_array
     from loopint.arrays.result import ArrayResult
     from loopint.arrays.tadpole import tadpole_array
+    from loopint.frames import evaluate
+    from loopint.interpolation.interpolant import Interpolant, load_interpolant
 
 __version__ = "0.1.0"
 
-_ARRAYS = {"ArrayResult": "result", "bubble_array": "bubble", "tadpole_array": "tadpole"}
+_LATER = {
+    "ArrayResult": "arrays.result",
+    "Interpolant": "interpolation.interpolant",
+    "bubble_array": "arrays.bubble",
+    "evaluate": "frames",
+    "load_interpolant": "interpolation.interpolant",
+    "tadpole_array": "arrays.tadpole",
+}
 
 __all__ = [
     "ArrayResult",
     "InputError",
+    "Interpolant",
     "LaurentSeries",
     "LoopintError",
     "LostOrderError",
@@ -34,7 +44,9 @@ __all__ = [
     "__version__",
     "bubble",
     "bubble_array",
+    "evaluate",
     "formula",
+    "load_interpolant",
     "propagator",
     "reduce_bubble",
     "tadpole",
@@ -43,9 +55,9 @@ __all__ = [
 
 
 def __getattr__(name: str) -> Any:  # noqa: ANN401 - PEP 562
-    """Import the array functions, and NumPy with them, when they are first used."""
-    if name not in _ARRAYS:
+    """Import what needs NumPy, or files, when it is first used."""
+    if name not in _LATER:
         raise AttributeError(f"module 'loopint' has no attribute {name!r}")
     from importlib import import_module  # noqa: PLC0415
 
-    return getattr(import_module(f"loopint.arrays.{_ARRAYS[name]}"), name)
+    return getattr(import_module(f"loopint.{_LATER[name]}"), name)

@@ -121,6 +121,16 @@ def compare(
     raise typer.Exit(0 if all(outcome.agrees for outcome in outcomes) else ATTENTION)
 
 
+@app.command(epilog="Example: loopint interpolate configs/interpolate.toml")
+def interpolate(config: CONFIG) -> None:
+    """Build interpolants over a range of p^2 whose error is proven, for fits."""
+    from loopint.console import show_interpolants
+    from loopint.interpolation.build import build_interpolants
+    from loopint.pipeline.config import InterpolationRunConfig, load_config_as
+
+    show_interpolants(build_interpolants(load_config_as(InterpolationRunConfig, config)))
+
+
 @app.command(epilog="Example: loopint report runs/quickstart")
 def report(
     run: Annotated[Path, typer.Argument(metavar="RUN", help="Directory of a finished run.")],

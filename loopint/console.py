@@ -21,10 +21,11 @@ from rich.table import Table
 from rich.text import Text
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator
+    from collections.abc import Callable, Iterator, Sequence
     from pathlib import Path
 
     from loopint.formulas.formula import Formula
+    from loopint.interpolation.build import Built
     from loopint.pipeline.estimate import Survey
     from loopint.pipeline.run import RunOutcome
     from loopint.pipeline.single import PointResult
@@ -217,6 +218,21 @@ def show_point(result: PointResult) -> None:
 def show_formula(formula: Formula, form: str) -> None:
     """Print a closed form exactly as it is written: its output can be run or typeset."""
     print(formula.printed(form), end="")
+
+
+def show_interpolants(built: Sequence[Built]) -> None:
+    """Print what was built, how certain it is, and where it is."""
+    out = _stdout()
+    for one in built:
+        interpolant = one.interpolant
+        low, high = interpolant.range
+        out.print(
+            f"{interpolant.name}: {escape(interpolant.integral)}, p^2 from {low:g} to {high:g}, "
+            f"{len(interpolant.centres)} pieces of degree up to {one.degree}"
+        )
+        for order, bound in interpolant.error_bounds.items():
+            out.print(f"  eps^{order}: |error| <= {bound:.1e} everywhere (proven)")
+        out.print(f"  {', '.join(escape(str(path)) for path in one.files)}")
 
 
 def _width(result: PointResult) -> int:

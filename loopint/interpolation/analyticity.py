@@ -1,0 +1,89 @@
+r"""A bound on the bubble B(1,1) in d0 = 4 at complex p^2, and how fast Chebyshev series converge.
+
+Let s = p^2, t = (m1+m2)^2 and v0 = 2 sqrt(m1 m2), with both masses positive.  Through order eps^0
+the bubble is a constant and J = Int_0^1 log Q dx.  In v = sqrt(t - s) the threshold is a regular
+point of J: Re v > 0 is the first sheet of s, and on the second sheet, Re v < 0,
+
+    J_II(s) = J_I(s) + D(s),    |D| = 2 pi |R/s|,    R^2 = lambda = v^2 (v^2 - v0^2),
+
+the continued discontinuity, which has no logarithm.  (Higher orders do have one: log(lambda) at
+threshold, and are not interpolated.)  D is singular at the pseudothreshold, v = -v0, and at s = 0,
+v = -sqrt(t), on the second sheet only.
+
+On the first sheet |J| <= Int |log Q| dx.  If |s| >= t/4 write Q = s (x-x_a)(x-x_b): the roots are
+bounded by |x| <= 1 + (|m1^2-m2^2| + t)/(2|s|) <= 5, and Int_0^1 |log|x-a|| dx is at most
+2 + log(1+|a|).  If |s| < t/4 then x(1-x) 3t/4 <= |Q| <= 17 t/16.  Both give
+
+    |J| <= A + 2 (2 + log 6) + pi,      A = max(|log(t/4)|, |log max|s||) + 0.3.
+
+On the strip -0.9 v0 < Re v < 0 of the second sheet |s| = |sqrt(t)-v| |sqrt(t)+v| >= t/10.
+
+A function bounded by M inside the ellipse with foci -1, 1 and half-axes (rho +- 1/rho)/2 differs
+from its interpolant in n+1 Chebyshev points by at most 4 M rho^(-n)/(rho-1)
+(Trefethen, Approximation Theory and Approximation Practice (2013), theorem 8.2).
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from loopint.core.conventions import Conventions
+from loopint.core.gamma_factors import EpsilonFactor
+from loopint.core.precision import working_precision
+
+STRIP = 0.9
+HIGHEST_ORDER = 0
+GROWTH = 1.001  # more than every rounding in these few operations together
+LARGEST_RHO = 60.0
+
+
+@dataclass(frozen=True)
+class Sheets:
+    """The geometry of a bubble with positive masses, in units of mu^2.
+
+    Attributes
+    ----------
+    threshold
+        t = (m1+m2)^2.
+    v0
+        2 sqrt(m1 m2).
+    """
+
+    threshold: float
+    v0: float
+
+    def largest_ellipse(self, below: bool, left: float, right: float) -> float:
+        """Return rho of an ellipse around [left, right] that stays on the strip.
+
+        `below`: the variable is v = sqrt(t-s), limited to the left; else u = sqrt(s-t) = i v,
+        limited towards negative imaginary parts.
+        """
+        half, middle = (right - left) / 2, (right + left) / 2
+        if below:
+            reach = (middle + STRIP * self.v0) / half  # of the larger half-axis
+            return min(reach + math.sqrt(reach * reach - 1), LARGEST_RHO)
+        reach = STRIP * self.v0 / half  # of the smaller half-axis
+        return min(reach + math.sqrt(reach * reach + 1), LARGEST_RHO)
+
+    def bound(self, radius: float) -> float:
+        """Return a bound on |J| on both sheets for |v| <= radius."""
+        t = self.threshold
+        a = max(abs(math.log(t / 4)), abs(math.log(t + radius * radius))) + 0.3
+        first = a + 2 * (2 + math.log(6)) + math.pi
+        second = 2 * math.pi * radius * math.sqrt(self.v0**2 + radius * radius) / (0.1 * t)
+        return GROWTH * (first + second)
+
+
+def coefficient_bound(sheets: Sheets, radius: float, conventions: Conventions) -> float:
+    """Bound the finite part of B on both sheets for |v| <= radius, in units where mu = 1."""
+    factor = conventions.measure.factor(4) * EpsilonFactor.gamma(0, 1)
+    with working_precision(64):
+        series = factor.series_through(0)
+        pole, constant = (float(abs(series[k]).upper()) for k in (-1, 0))
+    return GROWTH * (constant + pole * sheets.bound(radius))
+
+
+def truncation(bound: float, rho: float, degree: int) -> float:
+    """Return 4 M rho^(-n)/(rho-1)."""
+    return GROWTH * 4 * bound * rho**-degree / (rho - 1)

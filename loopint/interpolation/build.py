@@ -1,0 +1,390 @@
+"""Builds interpolants whose error is proven over the whole range."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+from flint import arb, fmpq
+
+from loopint.core.conventions import Conventions
+from loopint.core.errors import InputError
+from loopint.core.kinematics import TwoPoint
+from loopint.core.laurent import complex_ball
+from loopint.core.numbers import ExactComplex, float_with_bound
+from loopint.core.precision import working_precision
+from loopint.integrals.registry import Evaluator, Integral
+from loopint.interpolation.analyticity import (
+    HIGHEST_ORDER,
+    Sheets,
+    coefficient_bound,
+    truncation,
+)
+from loopint.interpolation.export import write_exports
+from loopint.interpolation.interpolant import Interpolant, save_interpolant
+from loopint.pipeline.errors import ConfigError, unknown_name
+
+if TYPE_CHECKING:
+    from collections.abc import Mapping
+
+    from loopint.pipeline.config import IntegralConfig, InterpolationRunConfig
+    from loopint.pipeline.expressions import Expression
+    from loopint.pipeline.interpolation_config import InterpolationConfig
+
+UNIT = 2.0**-53
+MOST_PIECES, MOST_DEGREE = 2000, 60
+NODE_DIGITS = 24
+BITS = 160
+Progress = Callable[[int, int], None]
+
+
+@dataclass(frozen=True)
+class Built:
+    """An interpolant and the files it is saved in."""
+
+    interpolant: Interpolant
+    files: tuple[Path, ...]
+    degree: int
+
+
+def build_interpolants(
+    config: InterpolationRunConfig, *, progress: Progress | None = None
+) -> list[Built]:
+    """Build and save every `[[interpolation]]` of a config.
+
+    Raises
+    ------
+    ConfigError
+        If an interpolation does not fit the config, or is not covered.
+    """
+    jobs = [_Job.prepare(config, entry) for entry in config.interpolations]
+    directory = config.output.directory
+    directory.mkdir(parents=True, exist_ok=True)
+    built = []
+    for number, job in enumerate(jobs):
+        interpolant, degree = job.build()
+        files = list(save_interpolant(interpolant, directory))
+        files += write_exports(interpolant, directory, job.entry.exports)
+        built.append(Built(interpolant, tuple(files), degree))
+        if progress is not None:
+            progress(number + 1, len(jobs))
+    return built
+
+
+@dataclass(frozen=True)
+class _Job:
+    """One interpolation; everything in units of mu^2 but `range` and `scale`."""
+
+    entry: InterpolationConfig
+    conventions: Conventions
+    low: fmpq
+    high: fmpq
+    m1: fmpq
+    m2: fmpq
+    where: str
+
+    @classmethod
+    def prepare(cls, config: InterpolationRunConfig, entry: InterpolationConfig) -> _Job:
+        where = f'{config.where}[[interpolation]] "{entry.name}"'
+        integrals = {one.name: one for one in config.integrals}
+        if entry.integral not in integrals:
+            raise ConfigError(
+                f'{where} integral = "{entry.integral}" {unknown_name(entry.integral, integrals)}'
+            )
+        integral = integrals[entry.integral]
+        if (integral.family, integral.powers, integral.dimension) != ("bubble", (1, 1), 4):
+            raise ConfigError(
+                f"{where} integral {entry.integral}: no proven interpolation; accepted: a bubble "
+                "with powers [1, 1] and dimension 4"
+            )
+        wrong = [k for k in entry.orders if not -1 <= k <= HIGHEST_ORDER]
+        if wrong:
+            raise ConfigError(
+                f"{where} orders has {wrong[0]}; accepted: -1 and {HIGHEST_ORDER} (higher ones "
+                "have a logarithm at threshold)"
+            )
+        try:
+            return cls._kinematics(config, entry, integral, where)
+        except InputError as error:
+            raise ConfigError(f"{where}: {error}") from None
+
+    @classmethod
+    def _kinematics(
+        cls,
+        config: InterpolationRunConfig,
+        entry: InterpolationConfig,
+        integral: IntegralConfig,
+        where: str,
+    ) -> _Job:
+        expressions = integral.expressions()
+        known = {name: value.evaluate({}) for name, value in entry.constants.items()}
+        variable = expressions["p_squared"].text
+        masses = []
+        for keys in integral.mass_keys:
+            if keys.width in expressions or keys.imaginary in expressions:
+                raise InputError(f"{keys.squared} is complex; accepted: stable particles")
+            squared = keys.squared in expressions
+            key = keys.squared if squared else keys.mass
+            mass = _constant(expressions[key], known, key)
+            if mass <= 0:
+                raise InputError(f"{key} = {mass}; accepted: positive masses")
+            masses.append(mass if squared else mass * mass)
+        if expressions["p_squared"].columns != {variable}:
+            raise InputError(f"p_squared = {variable}; accepted: a column, which is the variable")
+        low, high = (_constant(value, known, "range") for value in entry.range)
+        if low >= high:
+            raise InputError(f"range = [{low}, {high}]; accepted: two increasing numbers")
+        mu_squared = _constant(config.conventions.mu_squared, known, "mu_squared")
+        conventions = Conventions.parse(
+            config.conventions.measure, config.conventions.propagator_sign, mu_squared
+        )
+        return cls(entry, conventions, low, high, masses[0], masses[1], where)
+
+    def build(self) -> tuple[Interpolant, int]:
+        """Return the interpolant and the largest degree."""
+        mu = self.conventions.mu_squared
+        with working_precision(BITS):
+            product = arb(self.m1).sqrt() * arb(self.m2).sqrt()
+            threshold = arb(self.m1) + arb(self.m2) + 2 * product
+            # everything in the bound is in units of mu^2
+            sheets = Sheets(
+                float((threshold / arb(mu)).mid()), float((2 * (product / arb(mu)).sqrt()).mid())
+            )
+            unit = float(arb(mu).sqrt().mid())
+            pieces = self._pieces(threshold, sheets, unit)
+        evaluator = Evaluator(
+            Integral.parse("bubble", (1, 1), 4, (-1, HIGHEST_ORDER)),
+            self.conventions,
+            digits=NODE_DIGITS,
+        )
+        tolerance = float(self.entry.error)
+        chosen = [self._degree(piece, sheets, unit, tolerance / 4) for piece in pieces]
+        degree = max(chosen)
+        coefficients = {
+            k: np.zeros((len(pieces), degree + 1), dtype=np.complex128) for k in self.entry.orders
+        }
+        errors = dict.fromkeys(self.entry.orders, 0.0)
+        for number, (piece, n) in enumerate(zip(pieces, chosen, strict=True)):
+            found = self._interpolate(piece, n, evaluator, threshold)
+            for k in self.entry.orders:
+                values, node_error = found[k]
+                coefficients[k][number, : n + 1] = values
+                radius = piece.radius(sheets, unit)
+                bound = coefficient_bound(sheets, radius, self.conventions)
+                total = truncation(bound, piece.rho(sheets, unit), n) if k >= 0 else 0.0
+                total += node_error + _evaluation_error(values, piece)
+                errors[k] = max(errors[k], total)
+        for k, error in errors.items():
+            if error > tolerance:
+                raise ConfigError(
+                    f"{self.where} error = {self.entry.error} is not reached at order {k} (proven: "
+                    f"{error:.1e}); accepted: a larger error"
+                )
+        return self._finished(pieces, threshold, coefficients, errors), degree
+
+    def _finished(
+        self,
+        pieces: list[Piece],
+        threshold: arb,
+        coefficients: Mapping[int, np.ndarray],
+        errors: Mapping[int, float],
+    ) -> Interpolant:
+        with working_precision(BITS):
+            high = float(threshold.mid())
+            low = float((threshold - arb(high)).mid())
+        powers = "bubble(1, 1), d = 4 - 2 eps"
+        edges = [piece.left for piece in pieces] + [pieces[-1].right]
+        edges[0], edges[-1] = _double(self.low), _double(self.high)
+        return Interpolant(
+            self.entry.name,
+            f"{powers}, m1_squared = {self.m1}, m2_squared = {self.m2}",
+            tuple(self.entry.orders),
+            (edges[0], edges[-1]),
+            dict(errors),
+            (high, low),
+            np.array(edges),
+            np.array([piece.centre for piece in pieces]),
+            np.array([piece.half for piece in pieces]),
+            dict(coefficients),
+            {
+                "measure": str(self.conventions.measure),
+                "propagator_sign": str(self.conventions.propagator_sign),
+                "mu_squared": str(self.conventions.mu_squared),
+            },
+        )
+
+    def _pieces(self, threshold: arb, sheets: Sheets, unit: float) -> list[Piece]:
+        """Cut the range so that an acceptable degree reaches the error on every piece."""
+        t = float(threshold.mid())
+        low, high = _double(self.low), _double(self.high)
+        pieces: list[Piece] = []
+        if low < t:
+            start = math.sqrt(t - high) if high < t else 0.0
+            pieces += _cut(True, start, math.sqrt(t - low), t, sheets, unit)[::-1]
+        if high > t:
+            start = math.sqrt(low - t) if low > t else 0.0
+            pieces += _cut(False, start, math.sqrt(high - t), t, sheets, unit)
+        if len(pieces) > MOST_PIECES:
+            raise ConfigError(
+                f"{self.where} range needs {len(pieces)} pieces; accepted: a range with up to "
+                f"{MOST_PIECES}"
+            )
+        return pieces
+
+    def _degree(self, piece: Piece, sheets: Sheets, unit: float, tolerance: float) -> int:
+        """Return the smallest degree whose truncation error is proven to be small enough."""
+        rho, radius = piece.rho(sheets, unit), piece.radius(sheets, unit)
+        bound = coefficient_bound(sheets, radius, self.conventions)
+        n = 1
+        while truncation(bound, rho, n) > tolerance:
+            n += 1
+            if n > MOST_DEGREE:
+                raise ConfigError(
+                    f"{self.where} error = {self.entry.error} is beyond doubles; accepted: larger"
+                )
+        return n
+
+    def _interpolate(
+        self, piece: Piece, n: int, evaluator: Evaluator, threshold: arb
+    ) -> dict[int, tuple[np.ndarray, float]]:
+        """Return the rounded Chebyshev coefficients by order, and the error of the nodes.
+
+        The nodes are the n+1 Chebyshev points of the second kind; the interpolant of values within
+        e of the true ones is within (2/pi log(n+1) + 1) e (Trefethen, theorem 15.2).
+        """
+        with working_precision(BITS):
+            nodes = [_node(piece, j, n, threshold) for j in range(n + 1)]
+            masses = ExactComplex(self.m1), ExactComplex(self.m2)
+            series = [evaluator(TwoPoint(s, *masses)).series for s in nodes]
+            found: dict[int, tuple[np.ndarray, float]] = {}
+            for k in self.entry.orders:
+                balls = [complex_ball(one[k]) for one in series]
+                if all(ball == balls[0] for ball in balls):  # the pole
+                    value, bound = float_with_bound(balls[0].real)
+                    found[k] = (np.array([value] + [0.0] * n, dtype=np.complex128), bound)
+                    continue
+                largest = max(float(ball.rad().upper()) for ball in balls)
+                re = _chebyshev([ball.real.mid() for ball in balls])
+                im = _chebyshev([ball.imag.mid() for ball in balls])
+                rounded = [
+                    (float_with_bound(a), float_with_bound(b)) for a, b in zip(re, im, strict=True)
+                ]
+                array = np.array([complex(a[0], b[0]) for a, b in rounded])
+                rounding = sum(a[1] + b[1] for a, b in rounded)
+                lebesgue = 2 / math.pi * math.log(n + 1) + 1
+                found[k] = (array, 1.001 * (lebesgue * (largest + _shift_error(piece)) + rounding))
+        return found
+
+
+@dataclass(frozen=True)
+class Piece:
+    """An interval of w = sqrt(|t - s|) on one side of the threshold, in the user's units."""
+
+    below: bool
+    start: float
+    stop: float
+    left: float
+    right: float
+
+    @property
+    def centre(self) -> float:
+        """The middle in w."""
+        return (self.start + self.stop) / 2
+
+    @property
+    def half(self) -> float:
+        """Half the length in w."""
+        return (self.stop - self.start) / 2
+
+    def rho(self, sheets: Sheets, unit: float) -> float:
+        """Return the parameter of the ellipse that is used."""
+        largest = sheets.largest_ellipse(self.below, self.start / unit, self.stop / unit)
+        return 0.999 * largest
+
+    def radius(self, sheets: Sheets, unit: float) -> float:
+        """Return a bound on |w| in the ellipse, in units of mu."""
+        rho = self.rho(sheets, unit)
+        return 1.001 * (self.centre + self.half * (rho + 1 / rho) / 2) / unit
+
+
+def _cut(
+    below: bool, start: float, stop: float, t: float, sheets: Sheets, unit: float
+) -> list[Piece]:
+    """Cut [start, stop] in w into pieces with a roomy ellipse."""
+    pieces = []
+    at = start
+    while at < stop:
+        room = at + 0.9 * sheets.v0 * unit if below else sheets.v0 * unit
+        length = 0.8 * room  # the ellipse grows with the distance from the singularities
+        end = stop if at + 1.3 * length >= stop else at + length
+        near, far = (t - end * end, t - at * at) if below else (t + at * at, t + end * end)
+        pieces.append(Piece(below, at, end, near, far))
+        at = end
+        if len(pieces) > MOST_PIECES:
+            break
+    return pieces
+
+
+def _node(piece: Piece, j: int, n: int, threshold: arb) -> fmpq:
+    """Return s at a Chebyshev point, as a rational number close to it."""
+    x = arb(fmpq(j, n)).cos_pi()
+    w = arb(piece.centre) + arb(piece.half) * x
+    s = threshold - w * w if piece.below else threshold + w * w
+    mantissa, exponent = (int(part) for part in s.mid().man_exp())
+    return fmpq(mantissa) * fmpq(2) ** exponent
+
+
+def _shift_error(piece: Piece) -> float:
+    """Bound the effect of rounding the nodes to BITS bits, far below everything else."""
+    return 1e-30 * (1 + piece.stop)
+
+
+def _chebyshev(values: list[arb]) -> list[arb]:
+    """Return the Chebyshev coefficients of the interpolant in points of the second kind."""
+    n = len(values) - 1
+    weights = [fmpq(1, 2) if j in {0, n} else fmpq(1) for j in range(n + 1)]
+    found = []
+    for k in range(n + 1):
+        total = arb(0)
+        for j, (value, weight) in enumerate(zip(values, weights, strict=True)):
+            total += value * arb(fmpq(j * k, n)).cos_pi() * arb(weight)
+        total = total * 2 / n
+        found.append(total / 2 if k in {0, n} else total)
+    return found
+
+
+def _evaluation_error(c: np.ndarray, piece: Piece) -> float:
+    """Bound what `interpolant` loses in doubles: Clenshaw's recurrence and the variable x.
+
+    Each step adds at most UNIT (4 |2x b_(k+1)| + 3 |b_(k+2)| + 2 |c_k|), which reaches the result
+    multiplied by at most k+1, and |b_k| <= sum_j (j-k+1) |c_j|.  x is within 8 UNIT (1 + |w|/h).
+    """
+    sizes = np.abs(c.real) + np.abs(c.imag)
+    n = len(sizes)
+    beta = np.zeros(n + 2)
+    running = 0.0
+    for k in range(n - 1, -1, -1):
+        running += sizes[k:].sum()
+        beta[k] = running
+    place = np.arange(n, dtype=np.float64)
+    clenshaw = ((place + 1) * (8 * beta[1 : n + 1] + 3 * beta[2 : n + 2] + 2 * sizes)).sum()
+    slope = (place**2 * sizes).sum()
+    variable = 8 * (1 + piece.stop / piece.half) * slope
+    return float(1.01 * UNIT * (clenshaw + variable + sizes.sum()))
+
+
+def _constant(expression: Expression, known: Mapping[str, fmpq], key: str) -> fmpq:
+    for name in expression.columns:
+        if name not in known:
+            raise InputError(
+                f"{key} = {expression.text}: {name} has no value; accepted: it in constants"
+            )
+    return expression.evaluate(known)
+
+
+def _double(value: fmpq) -> float:
+    return float_with_bound(arb(value))[0]

@@ -1,0 +1,290 @@
+"""A certified interpolant as a user loads it: NumPy only.
+
+The range of s = p^2 is cut into pieces at the threshold t.  On each piece every coefficient is a
+Chebyshev series in x = (w - c)/h, where w = sqrt(t - s) below the threshold and sqrt(s - t) above:
+in that variable the threshold is a regular point.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from loopint.core.errors import LoopintError
+
+Real = NDArray[np.float64]
+Complex = NDArray[np.complex128]
+FORMAT = 1
+BLOCK = 8192  # the working set stays in the cache
+
+
+class InterpolantError(LoopintError):
+    """An interpolant that cannot be loaded, or an argument outside its range."""
+
+
+@dataclass(frozen=True)
+class Interpolant:
+    """Laurent coefficients of one integral as functions of p^2 over a range.
+
+    Attributes
+    ----------
+    name, integral
+        Its name, and the integral in words.
+    orders
+        The powers of epsilon.
+    range
+        The ends of the range of p^2, in the units of the points.
+    error_bounds
+        From order to a proven bound on |true coefficient - value| over the whole range, the
+        rounding of the evaluation included.
+    edges
+        The ends of the pieces in s, increasing.
+    coefficients
+        From order to an array (pieces, degree + 1) of Chebyshev coefficients.
+    conventions
+        Measure, propagator sign and mu^2.
+
+    Examples
+    --------
+    >>> interpolant = load_interpolant("resonance.json")  # doctest: +SKIP
+    >>> interpolant(0, [1.5, 9.2])                        # doctest: +SKIP
+    """
+
+    name: str
+    integral: str
+    orders: tuple[int, ...]
+    range: tuple[float, float]
+    error_bounds: Mapping[int, float]
+    threshold: tuple[float, float]
+    edges: Real
+    centres: Real
+    halves: Real
+    coefficients: Mapping[int, Complex]
+    conventions: Mapping[str, str]
+
+    @property
+    def pieces_below(self) -> int:
+        """The number of pieces below the threshold."""
+        return int((self.edges[1:] <= self.threshold[0]).sum())
+
+    def __call__(self, order: int, p_squared: ArrayLike, *, outside: str = "raise") -> Complex:
+        """Return the coefficient of eps^order.
+
+        Parameters
+        ----------
+        order
+            One of `orders`.
+        p_squared
+            Numbers or an array within `range`.
+        outside
+            "raise", or "nan" for points outside the range.
+
+        Raises
+        ------
+        InterpolantError
+            For an order that is not held, or a point outside the range.
+        """
+        s, _, piece, x = self._locate(order, p_squared, outside)
+        value = _clenshaw(self.coefficients[order], piece, x)
+        value[np.isnan(s)] = complex(np.nan, np.nan)
+        return value.reshape(np.shape(p_squared))
+
+    def gradient(self, order: int, p_squared: ArrayLike, *, outside: str = "raise") -> Complex:
+        """Return the derivative by p^2; infinite at the threshold itself.
+
+        It is the derivative of the interpolant; its error is not bounded, and small away from the
+        threshold.
+        """
+        s, below, piece, x = self._locate(order, p_squared, outside)
+        slopes = _derivative(self.coefficients[order])
+        w = x * self.halves[piece] + self.centres[piece]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            chain = np.where(below, -0.5, 0.5) / (w * self.halves[piece])
+            value = _clenshaw(slopes, piece, x) * chain
+        value[np.isnan(s)] = complex(np.nan, np.nan)
+        return value.reshape(np.shape(p_squared))
+
+    def _locate(
+        self, order: int, p_squared: ArrayLike, outside: str
+    ) -> tuple[Real, NDArray[np.bool_], NDArray[np.intp], Real]:
+        """Return s, whether it is below threshold, its piece, and x within the piece."""
+        if order not in self.coefficients:
+            raise InterpolantError(
+                f"order {order} is not in the interpolant {self.name}; accepted: "
+                f"{', '.join(map(str, self.orders))}"
+            )
+        s = np.array(p_squared, dtype=np.float64).ravel()
+        wrong = ~((s >= self.range[0]) & (s <= self.range[1]))
+        if wrong.any():
+            if outside != "nan":
+                raise InterpolantError(
+                    f"p_squared = {s[wrong][0]} is outside the range of {self.name}; accepted: "
+                    f'{self.range[0]} to {self.range[1]}, or outside = "nan"'
+                )
+            s[wrong] = np.nan
+        place = np.where(wrong, self.range[0], s)
+        piece = np.searchsorted(self.edges, place, side="right") - 1
+        distance = (place - self.threshold[0]) - self.threshold[1]
+        below = distance < 0
+        # the threshold is no double: the sign of the distance decides, not the edge
+        side = self.pieces_below
+        piece = np.where(below, np.minimum(piece, side - 1), np.maximum(piece, side))
+        piece = np.clip(piece, 0, len(self.centres) - 1)
+        w = np.sqrt(np.abs(distance))
+        x = np.clip((w - self.centres[piece]) / self.halves[piece], -1.0, 1.0)
+        return s, below, piece, x
+
+    def _repr_html_(self) -> str:
+        rows = "".join(
+            f"<tr><td>ε<sup>{k}</sup></td><td>{self.error_bounds[k]:.1e}</td></tr>"
+            for k in self.orders
+        )
+        return (
+            f"<p><b>{self.name}</b>: {self.integral}, p² from {self.range[0]:g} to "
+            f"{self.range[1]:g}, {len(self.centres)} pieces</p><table><tr><th>order</th>"
+            f"<th>error at most</th></tr>{rows}</table>"
+        )
+
+    def __repr__(self) -> str:
+        bounds = ", ".join(f"eps^{k}: {self.error_bounds[k]:.1e}" for k in self.orders)
+        return (
+            f"Interpolant({self.name}: {self.integral}, p^2 in [{self.range[0]:g}, "
+            f"{self.range[1]:g}], {len(self.centres)} pieces, error <= {{{bounds}}})"
+        )
+
+
+def _clenshaw(coefficients: Complex, piece: NDArray[np.intp], x: Real) -> Complex:
+    """Sum Chebyshev series, each point with the coefficients of its piece."""
+    result = np.empty(x.size, dtype=np.complex128)
+    order = np.argsort(piece, kind="stable") if np.any(np.diff(piece) < 0) else slice(None)
+    sorted_x, sorted_piece = x[order], piece[order]
+    starts = np.searchsorted(sorted_piece, np.arange(len(coefficients) + 1))
+    summed = np.empty(x.size, dtype=np.complex128)
+    for i, c in enumerate(coefficients):
+        for start in range(starts[i], starts[i + 1], BLOCK):
+            block = slice(start, min(start + BLOCK, starts[i + 1]))
+            summed.real[block] = _sum(c.real, sorted_x[block])
+            summed.imag[block] = _sum(c.imag, sorted_x[block])
+    result[order] = summed
+    return result
+
+
+def _sum(c: Real, x: Real) -> Real:
+    """Return sum_k c_k T_k(x) by Clenshaw's recurrence."""
+    if not c.any():
+        return np.zeros_like(x)
+    length = int(np.flatnonzero(c)[-1]) + 1
+    double = 2.0 * x
+    above, current = np.zeros_like(x), np.zeros_like(x)
+    for k in range(length - 1, 0, -1):
+        above *= -1.0
+        above += double * current
+        above += c[k]
+        above, current = current, above
+    result: Real = x * current - above + c[0]
+    return result
+
+
+def _derivative(coefficients: Complex) -> Complex:
+    """Return the Chebyshev coefficients of the derivatives by x."""
+    n = coefficients.shape[1]
+    found = np.zeros((coefficients.shape[0], max(n, 2)), dtype=np.complex128)
+    for k in range(n - 1, 0, -1):
+        found[:, k - 1] = 2 * k * coefficients[:, k]
+        if k + 1 < found.shape[1]:
+            found[:, k - 1] += found[:, k + 1]
+    found[:, 0] /= 2
+    return found
+
+
+# Files ------------------------------------------------------------------------------------------
+
+
+def save_interpolant(interpolant: Interpolant, directory: Path) -> tuple[Path, Path]:
+    """Write NAME.parquet (the numbers) and NAME.json (everything else); return both paths."""
+    import pyarrow as pa  # noqa: PLC0415 - evaluation needs NumPy alone
+    import pyarrow.parquet as pq  # noqa: PLC0415
+
+    columns: dict[str, Any] = {
+        "left": interpolant.edges[:-1],
+        "right": interpolant.edges[1:],
+        "centre": interpolant.centres,
+        "half": interpolant.halves,
+    }
+    for order, values in interpolant.coefficients.items():
+        columns[f"re_{order}"] = list(values.real)
+        columns[f"im_{order}"] = list(values.imag)
+    table, text = (directory / f"{interpolant.name}.{end}" for end in ("parquet", "json"))
+    pq.write_table(pa.table(columns), table)
+    content = {
+        "format": FORMAT,
+        "name": interpolant.name,
+        "integral": interpolant.integral,
+        "orders": interpolant.orders,
+        "range": interpolant.range,
+        "error_bounds": {str(k): v for k, v in interpolant.error_bounds.items()},
+        "threshold": interpolant.threshold,
+        "conventions": dict(interpolant.conventions),
+        "table": table.name,
+        "table_sha256": hashlib.sha256(table.read_bytes()).hexdigest(),
+    }
+    text.write_text(json.dumps(content, indent=2) + "\n", encoding="utf-8")
+    return text, table
+
+
+def load_interpolant(path: str | Path) -> Interpolant:
+    """Load an interpolant that `loopint interpolate` saved.
+
+    Parameters
+    ----------
+    path
+        The JSON file; the Parquet file stands beside it.
+
+    Raises
+    ------
+    InterpolantError
+        If the files are not there, damaged, or do not belong together.
+    """
+    import pyarrow.parquet as pq  # noqa: PLC0415 - evaluation needs NumPy alone
+
+    path = Path(path)
+    accepted = "accepted: a JSON file that loopint interpolate wrote, with its Parquet file"
+    try:
+        content = json.loads(path.read_text(encoding="utf-8"))
+        table_path = path.parent / content["table"]
+        if content["format"] != FORMAT:
+            raise InterpolantError(f"{path} has format {content['format']}; accepted: {FORMAT}")
+        if hashlib.sha256(table_path.read_bytes()).hexdigest() != content["table_sha256"]:
+            raise InterpolantError(f"{table_path} does not belong to {path}; {accepted}")
+        table = pq.read_table(table_path)
+        orders = tuple(int(k) for k in content["orders"])
+        coefficients = {
+            k: np.array(table.column(f"re_{k}").to_pylist())
+            + 1j * np.array(table.column(f"im_{k}").to_pylist())
+            for k in orders
+        }
+        left, right = (table.column(name).to_numpy() for name in ("left", "right"))
+        return Interpolant(
+            content["name"],
+            content["integral"],
+            orders,
+            (float(content["range"][0]), float(content["range"][1])),
+            {k: float(content["error_bounds"][str(k)]) for k in orders},
+            (float(content["threshold"][0]), float(content["threshold"][1])),
+            np.append(left, right[-1]),
+            table.column("centre").to_numpy(),
+            table.column("half").to_numpy(),
+            coefficients,
+            content["conventions"],
+        )
+    except FileNotFoundError as error:
+        raise InterpolantError(f"{error.filename} does not exist; {accepted}") from None
+    except (OSError, ValueError, KeyError, TypeError, IndexError) as error:
+        raise InterpolantError(f"{path} cannot be loaded: {error}; {accepted}") from None
