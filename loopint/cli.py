@@ -15,7 +15,6 @@ from loopint.core.errors import LoopintError
 
 app = typer.Typer(
     name="loopint",
-    add_completion=False,
     no_args_is_help=True,
     rich_markup_mode=None,
     pretty_exceptions_enable=False,
@@ -24,6 +23,8 @@ UNUSABLE = 2
 ATTENTION = 3
 INTERRUPTED = 130
 CONFIG = Annotated[Path, typer.Argument(metavar="CONFIG", help="TOML file of the run.")]
+JSON = Annotated[bool, typer.Option("--json", help="Print JSON on stdout, and nothing else.")]
+QUIET = Annotated[bool, typer.Option("--quiet", "-q", help="Print only what needs attention.")]
 
 
 def _version(wanted: bool) -> None:
@@ -58,20 +59,29 @@ def run(
         int | None,
         typer.Option(min=1, max=1024, help="Worker processes, instead of [execution] workers."),
     ] = None,
+    as_json: JSON = False,
+    quiet: QUIET = False,
 ) -> None:
     """Evaluate and cross-check all points; an interrupted run continues."""
-    from loopint.console import progress_bar, show_run
+    from loopint.console import progress_bar, show_attention, show_run
     from loopint.pipeline.config import load_config
     from loopint.pipeline.run import run_config
 
     settings = load_config(config)
     try:
-        with progress_bar("evaluating") as progress:
+        with progress_bar("evaluating", silent=quiet or as_json) as progress:
             outcome = run_config(settings, overwrite=overwrite, workers=workers, progress=progress)
     except KeyboardInterrupt:
         typer.echo("loopint: interrupted; the same command continues", err=True)
         raise typer.Exit(INTERRUPTED) from None
-    show_run(outcome, _try_report(outcome.directory))
+    report_file = _try_report(outcome.directory)
+    if as_json:
+        files = {"directory": str(outcome.directory), "report": str(report_file)}
+        typer.echo(json.dumps({**outcome.summary, **files}, indent=2))
+    elif quiet:
+        show_attention(outcome)
+    else:
+        show_run(outcome, report_file)
     raise typer.Exit(outcome.exit_code)
 
 
@@ -104,7 +114,7 @@ def grid(
 @app.command(epilog="Example: loopint compare configs/compare.toml")
 def compare(
     config: CONFIG,
-    as_json: Annotated[bool, typer.Option("--json", help="Print JSON.")] = False,
+    as_json: JSON = False,
 ) -> None:
     """Compare your own formulas or numbers with proven coefficients, region by region."""
     from loopint.console import progress_bar
@@ -112,7 +122,7 @@ def compare(
     from loopint.pipeline.compare import compare_config
     from loopint.pipeline.config import load_config
 
-    with progress_bar("comparing") as progress:
+    with progress_bar("comparing", silent=as_json) as progress:
         outcomes, path = compare_config(load_config(config), progress=progress)
     if as_json:
         typer.echo(json.dumps(comparisons_as_dict(outcomes, path), indent=2))
@@ -142,15 +152,22 @@ def report(
 
 
 @app.command(epilog="Example: loopint validate configs/quickstart.toml")
-def validate(config: CONFIG) -> None:
+def validate(config: CONFIG, as_json: JSON = False, quiet: QUIET = False) -> None:
     """Check config and points without evaluating: regions, rejected rows, estimated time."""
-    from loopint.console import progress_bar, show_survey
+    from dataclasses import asdict
+
+    from loopint.console import progress_bar, show_rejections, show_survey
     from loopint.pipeline.config import load_config
     from loopint.pipeline.estimate import survey_config
 
-    with progress_bar("checking") as progress:
+    with progress_bar("checking", silent=quiet or as_json) as progress:
         survey = survey_config(load_config(config), progress=progress)
-    show_survey(survey)
+    if as_json:
+        typer.echo(json.dumps(asdict(survey), indent=2, default=str))
+    elif quiet:
+        show_rejections(survey)
+    else:
+        show_survey(survey)
     raise typer.Exit(survey.exit_code)
 
 

@@ -47,10 +47,10 @@ class _Rate(ProgressColumn):
 
 
 @contextmanager
-def progress_bar(action: str) -> Iterator[Callable[[int, int], None] | None]:
-    """Show a progress bar on stderr inside the block; None if stderr is not a terminal."""
+def progress_bar(action: str, silent: bool = False) -> Iterator[Callable[[int, int], None] | None]:
+    """Show a progress bar on stderr inside the block; None if silent or stderr is no terminal."""
     console = Console(stderr=True)
-    if not console.is_terminal:
+    if silent or not console.is_terminal:
         yield None
         return
     with Progress(
@@ -102,10 +102,11 @@ def show_run(outcome: RunOutcome, report: Path | None = None) -> None:
     )
     if report is not None:
         out.print(f"to look at: {escape(str(report))}")
-    _show_attention(outcome)
+    show_attention(outcome)
 
 
-def _show_attention(outcome: RunOutcome) -> None:
+def show_attention(outcome: RunOutcome) -> None:
+    """Print on stderr what needs attention after a run."""
     err, summary, checks = _stderr(), outcome.summary, outcome.summary["cross_check"]
     if summary["rows_rejected"]:
         path = outcome.directory / "rejected.parquet"
@@ -152,6 +153,11 @@ def show_survey(survey: Survey) -> None:
         f"{1000 * survey.row_seconds:.2f} ms per row, and {survey.checks} cross-check(s) of "
         f"{1000 * survey.check_seconds:.1f} ms"
     )
+    show_rejections(survey)
+
+
+def show_rejections(survey: Survey) -> None:
+    """Print on stderr the rows that a run will reject."""
     err = _stderr()
     for rejection in survey.rejections:
         key = "" if rejection.key == rejection.row else f" (key {rejection.key})"

@@ -49,15 +49,13 @@ def show_comparisons(outcomes: Sequence[Comparison], path: Path) -> None:
             regions = ", ".join(hint.regions)
             out.print(
                 f"  hint: {escape(hint.text)}: repairs {hint.rows} of {hint.of_rows} in {regions} "
-                f"(to at least {hint.worst_digits} digits)"
+                f"(to {hint.worst_digits} digits)"
             )
         if outcome.disagreeing and not outcome.hints:
             out.print("  no hint: none of the known mistakes explains it")
-        if outcome.undecided_cuts:
-            out.print(
-                f"  note: {outcome.undecided_cuts} value(s) lie on a branch cut that no i0 decides; "
-                "write + i0"
-            )
+        cuts = outcome.undecided_cuts
+        if cuts:
+            out.print(f"  note: {cuts} value(s) lie on a branch cut that no i0 decides; write + i0")
         for place, reason in outcome.failures[:NAMED_ROWS]:
             out.print(f"  row {place} has no value: {escape(reason)}")
         if len(outcome.failures) > NAMED_ROWS:

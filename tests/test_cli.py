@@ -63,6 +63,29 @@ def test_run_prints_the_account(loopint, tmp_path):
     assert "finished before" not in out
 
 
+def test_json_and_quiet(loopint, tmp_path):
+    config = write_run(tmp_path, points_table(12, s={3: float("nan")}))
+    code, out, err = loopint("validate", config, "--json")
+    assert (code, json.loads(out)["rows_rejected"], err) == (3, 1, "")
+    code, out, err = loopint("validate", config, "--quiet")
+    assert (code, out) == (3, "")
+    assert "column s is nan" in one_sentence(err)
+    code, out, err = loopint("run", config, "--json")
+    assert (code, err) == (3, "")
+    summary = json.loads(out)
+    assert (summary["rows_in"], summary["rows_rejected"]) == (12, 1)
+    assert Path(summary["report"]).name == "report.html"
+    code, out, err = loopint("run", config, "--quiet")
+    assert (code, out) == (3, "")
+    assert "1 row(s) rejected" in one_sentence(err)
+
+
+def test_a_misspelt_command_is_answered(loopint):
+    code, _out, err = loopint("compair", "x")
+    assert code == 2
+    assert "Did you mean 'compare'?" in err
+
+
 def test_rejected_rows_give_exit_code_3_and_one_line(loopint, tmp_path):
     config = write_run(tmp_path, points_table(12, s={3: float("nan")}))
     code, out, err = loopint("run", config)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import pytest
 from flint import arb
 
+import loopint
 from loopint.core.errors import InputError, LostOrderError
 from loopint.core.laurent import BallSeries, check_orders
 
@@ -51,3 +52,16 @@ def test_orders_below_the_lowest_are_exact_zeros() -> None:
 def test_bad_order_ranges(orders: object) -> None:
     with pytest.raises(InputError):
         check_orders(orders)
+
+
+def test_notebook_representations() -> None:
+    series = loopint.bubble(5, 1, 1, orders=(-2, 0), digits=12)
+    html = series._repr_html_()
+    assert "region above_threshold" in html
+    assert "i</td>" in html
+    assert html.count("<tr>") == 4
+    latex = series._repr_latex_()
+    assert latex.startswith("$")
+    assert "varepsilon^{-1}" in latex
+    assert "varepsilon^{-2}" not in latex  # exactly zero
+    assert "O(\\varepsilon^{1})" in latex

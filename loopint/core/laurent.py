@@ -238,6 +238,26 @@ class LaurentSeries:
     def __len__(self) -> int:
         return self.orders[1] - self.orders[0] + 1
 
+    def _repr_html_(self) -> str:
+        rows = "".join(
+            f"<tr><td>ε<sup>{order}</sup></td><td>{_shown(self[order], self.digits)}</td>"
+            f"<td>{mpmath.nstr(self.bounds[order], 2)}</td></tr>"
+            for order in self
+        )
+        return (
+            f"<p>{self.digits} digits, region {self.region}, method {self.method}, status "
+            f"{self.status}</p><table><tr><th>order</th><th>coefficient</th><th>|error| ≤</th></tr>"
+            f"{rows}</table>"
+        )
+
+    def _repr_latex_(self) -> str:
+        terms = [
+            rf"\left({_shown(self[order], min(self.digits, 10))}\right) \varepsilon^{{{order}}}"
+            for order in self
+            if self[order] != 0 or self.bounds[order] != 0
+        ]
+        return rf"${' + '.join(terms) or '0'} + O(\varepsilon^{{{self.orders[1] + 1}}})$"
+
     def __repr__(self) -> str:
         lines = [
             f"LaurentSeries, {self.digits} digits, region {self.region}, "
@@ -248,6 +268,14 @@ class LaurentSeries:
             bound = mpmath.nstr(self.bounds[order], 2)
             lines.append(f"  eps^{order:<3d} {value}  +/- {bound}")
         return "\n".join(lines)
+
+
+def _shown(value: mpmath.mpc, digits: int) -> str:
+    """Write a complex number without a part that is zero."""
+    re, im = (str(mpmath.nstr(part, digits)) for part in (value.real, abs(value.imag)))
+    if value.imag == 0:
+        return re
+    return f"{re} {'-' if value.imag < 0 else '+'} {im} i"
 
 
 def _hypotenuse_up(a: mpmath.mpf, b: mpmath.mpf) -> mpmath.mpf:
