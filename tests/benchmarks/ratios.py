@@ -21,7 +21,22 @@ from flint import acb, arb
 from scipy.special import spence
 
 from loopint import bubble, bubble_array
+from loopint.core.kinematics import TwoPoint
+from loopint.core.numbers import ExactComplex, exact_real
+from loopint.arrays.bubble import bubble_doubles
+from loopint.core.conventions import Conventions
 from loopint.core.precision import working_precision
+from loopint.integrals.registry import Integral
+from tests.campaign_arrays import (
+    INTEGRALS,
+    TOLERANCE,
+    hierarchical,
+    logarithmic,
+    one_unstable,
+    uniform,
+    unstable,
+)
+from loopint.integrals.registry import Evaluator, Integral
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -201,10 +216,13 @@ def ball_rows() -> list[Row]:
     rows = []
     for digits in (16, 30, 50, 100):
         for highest in (0, 3):
+            integral = Integral.parse("bubble", (1, 1), 4, (-1, highest))
+            evaluator = Evaluator(integral, digits=digits)
 
-            def ours(digits=digits, highest=highest) -> None:
-                for point in BALL_POINTS:
-                    bubble(*point, orders=(-1, highest), digits=digits)
+            def ours(evaluator=evaluator) -> None:
+                for p, m1, m2 in BALL_POINTS:
+                    masses = ExactComplex(exact_real(m1)), ExactComplex(exact_real(m2))
+                    evaluator(TwoPoint(exact_real(p), *masses))
 
             work = f"balls, {digits} digits, -1..{highest}"
             options = {"repeats": 3, "loops": 5}
@@ -343,6 +361,24 @@ def double_rows() -> list[Row]:
     ]
 
 
+def ball_shares() -> list[dict[str, object]]:
+    """Which share of random points is left to ball arithmetic, for everything that is vectorised."""
+    rows = []
+    rng = np.random.default_rng(5)
+    kinds = (uniform, logarithmic, hierarchical, unstable, one_unstable)
+    print(f"{'':<20}" + "".join(f"{kind.__name__:>14}" for kind in kinds))
+    for name, (powers, derivatives, orders) in INTEGRALS.items():
+        integral = Integral.parse("bubble", powers, 4, orders, derivatives)
+        row: dict[str, object] = {"integral": name}
+        for kind in kinds:
+            points = kind(rng, COUNT // 5)
+            missing = bubble_doubles(integral, Conventions(), points, TOLERANCE).missing
+            row[kind.__name__] = float(missing.mean())
+        rows.append(row)
+        print(f"{name:<20}" + "".join(f"{row[kind.__name__]:14.1e}" for kind in kinds), flush=True)
+    return rows
+
+
 def lost_digits() -> list[dict[str, object]]:
     """Correct digits of the finite part on each side in the regions that cost digits."""
     rng = np.random.default_rng(7)
@@ -386,8 +422,14 @@ def main() -> None:
     balls = ball_rows()
     print("\nworst digits of the finite part, relative to max(1, |value|)")
     digits = lost_digits()
+    print(f"\nshare of {COUNT // 5} random points left to balls, bounds within 1e-12 of the series")
+    shares = ball_shares()
     if len(sys.argv) > 1:
-        table = {"ratios": [asdict(row) for row in doubles + balls], "digits": digits}
+        table = {
+            "ratios": [asdict(row) for row in doubles + balls],
+            "digits": digits,
+            "ball_shares": shares,
+        }
         with open(sys.argv[1], "w", encoding="utf-8") as stream:
             json.dump(table, stream, indent=2)
 
