@@ -83,8 +83,8 @@ def adversarial(count: int) -> pa.Table:
         (0.0, 0.0, 0.0), (0.0, 0.0, 1.0), (3.0, 0.0, 0.0), (-3.0, 0.0, 2.0), (7.0, 2.0, 0.0),
         (np.nextafter(9, 10), 1.0, 4.0), (np.nextafter(9, 8), 1.0, 4.0),
         (np.nextafter(1, 2), 1.0, 4.0), (9 + 1e-9, 1.0, 4.0), (np.nextafter(2, 3), 2.0, 0.0),
-        (np.nan, 1.0, 1.0), (np.inf, 1.0, 1.0), (1.0, -1.0, 1.0), (5e-324, 1.0, 2.0),
-        (1e300, 1.0, 2.0), (-1e-300, 1e-300, 2e-300), (1.0, 1e-40, 1.0), (3.0, 1e-40, 1.0),
+        (np.nan, 1.0, 1.0), (np.inf, 1.0, 1.0), (1.0, -1.0, 1.0), (1e-50, 1.0, 2.0),
+        (1e60, 1.0, 2.0), (-1e-30, 1e-30, 2e-30), (1.0, 1e-40, 1.0), (3.0, 1e-40, 1.0),
         (1e-12, 1.0, 1.0), (-0.0, 1.0, 2.0),
     ]  # fmt: skip
     for i, (x, y, z) in enumerate(special):
@@ -133,7 +133,9 @@ def test_everything_but_the_last_digits_is_the_same(both: tuple[Path, Path]) -> 
 def test_bounds_hold(both: tuple[Path, Path]) -> None:
     double, ball = (pd.read_parquet(path / "table") for path in both)
     for part in ("re", "im"):
-        gap = (double[part] - ball[part]).abs()[np.isfinite(ball[part])]  # 1e300^2 overflows
+        gap = (double[part] - ball[part]).abs()[
+            np.isfinite(ball[part])
+        ]  # an overflow is below the digits
         allowed = double[f"{part}_bound"] + ball[f"{part}_bound"]
         assert (gap <= allowed[gap.index]).all()
     inexact = double[(double["method"] == METHOD) & double["digits"].notna()]

@@ -14,6 +14,7 @@ from functools import partial
 from pathlib import Path
 
 import mpmath
+import numpy as np
 import pandas as pd
 import pyarrow as pa
 import pyarrow.parquet as pq
@@ -433,3 +434,23 @@ def test_engine_yields_every_result_and_passes_errors_on(workers):
 def test_dead_worker_is_one_clear_error():
     with pytest.raises(EngineError, match="worker process died"):
         list(run_tasks(partial(partial, os._exit), range(8), 2))
+
+
+@pytest.mark.parametrize("layout", ["long", "wide"])
+def test_npz_holds_the_table(tmp_path, layout):
+    formats = '["parquet", "npz"]'
+    config = write_run(tmp_path, points_table(30), layout=layout, formats=formats)
+    outcome = run_config(load_config(config))
+    table = pq.read_table(outcome.directory / "table")
+    first = (outcome.directory / "table.npz").read_bytes()
+    with np.load(outcome.directory / "table.npz", allow_pickle=False) as arrays:
+        assert set(arrays) == {*table.column_names, "loopint"}
+        for name in table.column_names:
+            expected = table.column(name).to_pandas().to_numpy()
+            if arrays[name].dtype.kind == "f":
+                assert np.array_equal(arrays[name], expected.astype(float), equal_nan=True)
+            else:
+                assert arrays[name].tolist() == expected.tolist()
+        assert json.loads(str(arrays["loopint"]))["conventions"]["measure"] == "msbar"
+    run_config(load_config(config), overwrite=True)
+    assert (outcome.directory / "table.npz").read_bytes() == first

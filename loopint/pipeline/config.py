@@ -292,11 +292,11 @@ class OutputConfig(Section):
 
     directory: FilePath = Field(description="the path of a directory for this run")
     layout: Literal["long", "wide"] = Field(default="long", description='"long" or "wide"')
-    formats: tuple[Literal["parquet", "csv"], ...] = Field(
+    formats: tuple[Literal["parquet", "csv", "npz"], ...] = Field(
         default=("parquet",),
         strict=False,
         min_length=1,
-        description='an array of "parquet", "csv" or both',
+        description='an array of "parquet", "csv", "npz"',
     )
 
 

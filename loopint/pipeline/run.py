@@ -12,6 +12,7 @@ from loopint.pipeline.account import Account
 from loopint.pipeline.chunks import ChunkEvaluator, open_run
 from loopint.pipeline.engines import choose_engine, usable_cores
 from loopint.pipeline.errors import ConfigError
+from loopint.pipeline.exports import write_npz
 from loopint.pipeline.manifest import manifest_content, package_version, plan_hash
 from loopint.pipeline.run_directory import RunDirectory, write_json
 from loopint.pipeline.tables import merge_parquet, write_csv
@@ -169,6 +170,9 @@ def _finish(
     if "csv" in config.output.formats:
         parts = (directory.part(record.index) for record in records)
         write_csv(directory.csv, opened.layout.schema, parts)
+    if "npz" in config.output.formats:
+        parts = (directory.part(record.index) for record in records)
+        write_npz(directory.npz, opened.layout.schema, list(parts))
 
 
 def _summary(config: RunConfig, opened: OpenedRun, account: Account) -> dict[str, Any]:

@@ -133,6 +133,7 @@ class RunDirectory:
         self.path = path
         self.table = path / "table"
         self.csv = path / "table.csv"
+        self.npz = path / "table.npz"
         self.rejected = path / "rejected.parquet"
         self.cross_check = path / "cross_check.parquet"
         self.summary = path / "summary.json"
@@ -228,7 +229,8 @@ class RunDirectory:
 
     def _refuse_foreign_files(self) -> None:
         ours = (
-            self.table, self.csv, self.rejected, self.cross_check, self.summary, self.manifest,
+            self.table, self.csv, self.npz, self.rejected, self.cross_check, self.summary,
+            self.manifest,
         )  # fmt: skip
         for path in ours:
             if path.exists() and not (path.is_dir() and not any(path.iterdir())):
@@ -244,7 +246,7 @@ class RunDirectory:
             if path.name != "lock":
                 path.unlink(missing_ok=True)
         report = self.path / "report.html"
-        for path in (self.csv, self.rejected, self.cross_check, self.summary, report):
+        for path in (self.csv, self.npz, self.rejected, self.cross_check, self.summary, report):
             path.unlink(missing_ok=True)
         self.manifest.unlink(missing_ok=True)
 
