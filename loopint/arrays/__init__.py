@@ -13,5 +13,15 @@ points with a nonzero one below 2^-200 of it are left to ball arithmetic, so not
 
 Errors are carried in units of u to first order; the products of two errors that this drops are
 covered by 1 % on the final bound, as every relative error that is used is below 2^-20.
-A point whose bound misses the tolerance is evaluated in ball arithmetic.
+
+Stages
+------
+A point takes the first of these whose bound meets the tolerance, whatever the points beside it:
+
+1.  Two orders of B(1,1), real masses: `logarithms`, three logarithms in plain doubles.
+2.  B(1,1), real masses: `ends` in plain doubles, where no w is close to 1 with lambda >= 0.
+3.  `ends` with lambda and A beyond double precision: everything but roots of Q far from [0,1].
+4.  `masters`: a Gauss rule for those, integration by parts for what is left.
+5.  Ball arithmetic: fewer than one in a thousand of random points, and where there is no formula
+    (a pole of the infrared, entries that span more than 2^200).
 """

@@ -2,16 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from functools import lru_cache
+from functools import lru_cache, partial
 from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from loopint.arrays.end_tables import end_tables
-from loopint.arrays.ends import GROUPED, Block, Variable, Work, plain_block, precise_block
+from loopint.arrays.ends import GROUPED, Variable, Work, expand_plain
 from loopint.arrays.ends import expand as expand_ends
 from loopint.arrays.evaluate import (
     BLOCK,
@@ -50,6 +50,7 @@ if TYPE_CHECKING:
 HIGHEST_ORDER = 2
 LOG_TWO = 0.6931471805599453
 PLAIN_RANGE = 2.0**200
+LOGARITHM_BLOCK = 2 * BLOCK
 GROUPED_BLOCK = 8 * BLOCK  # it is split into groups of points
 SAFE_EXPONENT = 900  # results in units of 1/mass^2 neither overflow nor underflow
 
@@ -263,6 +264,8 @@ def _fill_by_ends(
 
     Plain doubles serve most real points of B(1,1); derivatives near lambda = 0 need more of it.
     """
+    if index.size == 0:
+        return index
     p, m1, m2 = kinematics
     real = not (np.iscomplexobj(m1) or np.iscomplexobj(m2))
     variable, sign = Variable.NONE, float(plan.sign)
@@ -277,28 +280,18 @@ def _fill_by_ends(
     work = Work(variable, highest, within, end_tables(plan.measure, highest, real))
     leading = abs(plan.prefactor[0]) if plan.master is Master.J else 0.0
     arrays.missing[index] = True
-    passes: list[Callable[[Real, Number, Number], Block]] = [precise_block]
+    passes = [expand_ends if variable is Variable.NONE else partial(_in_own_units, log_mu)]
     if real and variable is Variable.NONE:
-        passes.insert(0, plain_block)
-    for derive in passes:
+        passes.insert(0, expand_plain)
+    whole = index.size == p.size
+    all_plain = whole and all(_outside_plain_range(array).size == 0 for array in (p, m1, m2))
+    for evaluate in passes:
         for start in range(0, index.size, GROUPED):
             where = index[start : start + GROUPED]
-            usable = ~(
-                _far_from_one(p[where]) | _far_from_one(m1[where]) | _far_from_one(m2[where])
-            )
-            where = where if usable.all() else where[usable]
-            if where.size == 0:
-                continue
-            block = p[where], m1[where], m2[where]
-            if variable is Variable.NONE:
-                groups = expand_ends(work, derive(*block))
-            else:
-                groups = _in_own_units(work, block, log_mu)
-            for group, series in groups:
-                if sign != 1.0:
-                    for value in series.values:
-                        value *= sign
-                arrays.store(where[group], 0, series, tolerance, leading)
+            if not all_plain:
+                where = where[_usable(p[where]) & _usable(m1[where]) & _usable(m2[where])]
+            for group, series in evaluate(work, p[where], m1[where], m2[where]):
+                arrays.store(where[group], 0, series.times_sign(sign), tolerance, leading)
         index = index[arrays.missing[index]]
         for order, value in arrays.values.items():
             if order >= 0:
@@ -307,31 +300,35 @@ def _fill_by_ends(
 
 
 def _in_own_units(
-    work: Work, block: tuple[Real, Number, Number], log_mu: float
+    log_mu: float, work: Work, p: Real, first: Number, second: Number
 ) -> Iterator[tuple[NDArray[np.intp], ArraySeries]]:
-    """Evaluate derivatives at points scaled by powers of two to a mass near 1: logarithms cost least."""
-    largest = np.maximum(np.abs(block[1]), np.abs(block[2]))
-    largest = np.where(largest == 0, np.abs(block[0]), largest)
-    exponent = np.frexp(largest * np.sqrt(0.5))[1]
+    """Evaluate derivatives at points scaled by powers of two, so that logarithms cost least.
+
+    The unit is mu^2, or the squared mass next to it if both lie on one side.
+    """
+    sizes = [np.where(m == 0, np.abs(n), np.abs(m)) for m, n in ((first, second), (second, first))]
+    exponents = [np.frexp(np.where(m == 0, np.abs(p), m) * np.sqrt(0.5))[1] for m in sizes]
+    exponent = np.maximum(round(log_mu / LOG_TWO), np.minimum(*exponents))
+    exponent = np.minimum(exponent, np.maximum(*exponents))
     factor = np.ldexp(1.0, -exponent)
     scale = exponent * LOG_TWO
     shift: Real = np.asarray(log_mu - scale, dtype=np.float64)
     shift_error = 2.0 * np.abs(scale) + abs(log_mu) + np.abs(shift)
     one = [1.0] + [0.0] * (work.highest - 1)
-    scaled = precise_block(block[0] * factor, block[1] * factor, block[2] * factor)
-    for group, series in expand_ends(work, scaled):
+    for group, series in expand_ends(work, p * factor, first * factor, second * factor):
         result = series.times(constants_times_exponential(one, shift[group], shift_error[group]))
-        for value, error in zip(result.values, result.errors, strict=True):
-            value *= factor[group]
-            error *= factor[group]
-        yield group, result
+        units = factor[group]
+        yield (
+            group,
+            ArraySeries([v * units for v in result.values], [e * units for e in result.errors]),
+        )
 
 
-def _far_from_one(array: Number) -> NDArray[np.bool_]:
-    """Mark entries that are neither zero nor within 2^+-200."""
+def _usable(array: Number) -> NDArray[np.bool_]:
+    """Mark entries that are zero or within 2^+-200."""
     sizes = np.abs(array)
-    far: NDArray[np.bool_] = ~(((sizes > 1 / PLAIN_RANGE) & (sizes < PLAIN_RANGE)) | (sizes == 0))
-    return far
+    usable: NDArray[np.bool_] = ((sizes > 1 / PLAIN_RANGE) | (sizes == 0)) & (sizes < PLAIN_RANGE)
+    return usable
 
 
 def _fill_general(
@@ -361,8 +358,9 @@ def _fill_with_logarithms(
 ) -> None:
     all_plain = all(_outside_plain_range(array).size == 0 for array in kinematics)
     whole = index.size == kinematics[0].size
-    for start in range(0, index.size, BLOCK):
-        where = slice(start, start + BLOCK) if whole else index[start : start + BLOCK]
+    for start in range(0, index.size, LOGARITHM_BLOCK):
+        stop = start + LOGARITHM_BLOCK
+        where = slice(start, stop) if whole else index[start:stop]
         block = [array[where] for array in kinematics]
         found = finite_part(block[0], block[1], block[2])
         if not all_plain:
@@ -376,10 +374,9 @@ def _outside_plain_range(array: Real) -> NDArray[np.intp]:
     """Return where entries are neither zero nor within 2^+-200."""
     if array.size == 0:
         return np.flatnonzero(array)
-    low, high = array.min(), array.max()
-    if low > 1 / PLAIN_RANGE and high < PLAIN_RANGE:
-        return np.flatnonzero(np.zeros(0))
     sizes = np.abs(array)
+    if sizes.min() > 1 / PLAIN_RANGE and sizes.max() < PLAIN_RANGE:
+        return np.flatnonzero(np.zeros(0))
     inside = (sizes > 1 / PLAIN_RANGE) & (sizes < PLAIN_RANGE)
     return np.flatnonzero(~(inside | (sizes == 0)))
 

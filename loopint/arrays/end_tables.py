@@ -31,17 +31,17 @@ REAL_STEP, COMPLEX_STEP = 2.0, 3.3  # rounding of one step of Horner's rule, in 
 
 FAR_REAL = (-0.6932, 1.3864)  # u = -log(1-w) from -log 2 to log 4
 NEAR_REAL = (-2.4675, 0.0208)  # t = (log w)^2/4 from -pi^2/4 to (log 4/3)^2/4
-FAR_COMPLEX = 15 / 16  # |u| where |w| <= 1 and Re w <= 1/4
-NEAR_COMPLEX = 31 / 64  # |t| where |w| <= 1 and Re w >= 1/4
+FAR_COMPLEX = 89 / 64  # |u| where |w| <= 1 and Re w <= 3/4
+NEAR_COMPLEX = 17 / 128  # |t| where |w| <= 1 and Re w >= 3/4
 
 
 @dataclass(frozen=True, slots=True)
 class EndTable:
-    """One polynomial for each power of epsilon from eps^0, in x - centre for |x - centre| <= radius.
+    """One polynomial in x - centre, |x - centre| <= radius, for each power of epsilon from eps^0.
 
     `sizes[k]` bounds the k-th one; its error is at most `error` + `slope` * (error of x), in units
-    of UNIT and relative to that size: Horner's rule gives sum (step n + 2) |c_n| r^n, which includes
-    the rounding of c_n, and the rounding of x - centre is counted as an error of x.
+    of UNIT and relative to that size: Horner's rule gives sum (step n + 2) |c_n| r^n, including the
+    rounding of c_n, and the rounding of x - centre is counted as an error of x.
     """
 
     centre: float
@@ -55,10 +55,10 @@ class EndTable:
         """Return the polynomials from eps^first by Horner's rule, one row each."""
         shifted = x - self.centre if self.centre else x
         rows = self.coefficients[:, first:]
-        value = np.empty((rows.shape[1], x.size), dtype=x.dtype)
+        value: Number = np.multiply(rows[0], shifted)
         other = np.empty_like(value)
-        value[...] = rows[0]
-        for row in rows[1:]:
+        value += rows[1]
+        for row in rows[2:]:
             np.multiply(value, shifted, out=other)
             other += row
             value, other = other, value
@@ -85,6 +85,8 @@ class EndTables:
         With the key (b, plus, minus): F {b B + S [plus exp(i pi eps) + minus exp(-i pi eps)]}.
     above
         F {B exp(i pi eps) + n S} for n = 0, 1, 2.
+    singular
+        F S.
     """
 
     far: EndTable
@@ -93,6 +95,7 @@ class EndTables:
     near_slope: EndTable
     root: dict[tuple[int, int, int], Constants]
     above: tuple[Constants, ...]
+    singular: tuple[float, ...]
 
 
 @lru_cache(maxsize=32)
@@ -109,8 +112,10 @@ def end_tables(measure: Measure, highest: int, real: bool) -> EndTables:
             (near, NEAR_REAL, NEAR_COMPLEX),
         ):
             slopes = [_differentiated(row) for row in rows]
-            for pieces in (rows, slopes):
-                shapes.append(_on_interval(pieces, *interval) if real else _on_disc(pieces, disc))
+            shapes += [
+                _on_interval(pieces, *interval) if real else _on_disc(pieces, disc)
+                for pieces in (rows, slopes)
+            ]
         between = [real_part(tables.between_roots[k]) for k in range(highest + 1)]
         singular = [real_part(tables.singular[k]) for k in range(highest + 1)]
         return EndTables(
@@ -120,6 +125,7 @@ def end_tables(measure: Measure, highest: int, real: bool) -> EndTables:
             shapes[3],
             _roots(between, singular),
             _above(between, singular),
+            tuple(float(c.mid()) for c in singular),
         )
 
 
@@ -169,8 +175,9 @@ def _on_interval(
     centre = round((low + high) * 32) / 64
     half = max(high - centre, centre - low)
     found = []
-    for coefficients, radius, tail in map(_piece, rows):
+    for series, radius, remainder in map(_piece, rows):
         assert abs(centre) + half <= radius
+        coefficients, tail = _cut(series, remainder, abs(centre) + half, GOAL * 2.0**-20)
         shifted = arb_poly(coefficients)(arb_poly([centre, half]))
         chebyshev = _chebyshev(list(shifted.coeffs()))
         terms, dropped = len(chebyshev), tail
@@ -189,14 +196,19 @@ def _on_disc(rows: list[Piece] | list[tuple[list[arb], arb]], disc: float) -> En
     found = []
     for coefficients, radius, tail in map(_piece, rows):
         assert disc <= radius
-        terms, dropped = len(coefficients), tail
-        while terms > 1:
-            more = dropped + coefficients[terms - 1].abs_upper() * arb(disc) ** (terms - 1)
-            if not more <= GOAL:
-                break
-            terms, dropped = terms - 1, more
-        found.append((coefficients[:terms], dropped))
+        found.append(_cut(coefficients, tail, disc, GOAL))
     return _rounded(found, 0.0, disc, COMPLEX_STEP)
+
+
+def _cut(coefficients: list[arb], tail: arb, radius: float, goal: float) -> tuple[list[arb], arb]:
+    """Drop as many terms as the goal allows for |x| <= radius."""
+    terms, dropped = len(coefficients), tail
+    while terms > 1:
+        more = dropped + coefficients[terms - 1].abs_upper() * arb(radius) ** (terms - 1)
+        if not more <= goal:
+            break
+        terms, dropped = terms - 1, more
+    return coefficients[:terms], dropped
 
 
 def _chebyshev(coefficients: list[arb]) -> list[arb]:

@@ -109,13 +109,15 @@ class Arrays:
         Imaginary parts of real series are left alone.
         """
         largest: Real | float = leading
-        missing: NDArray[np.bool_] | bool = False
+        missing = np.zeros(series.errors[0].shape, dtype=bool)
         for k, (value, error) in enumerate(zip(series.values, series.errors, strict=True)):
             modulus = size(value)
-            largest = np.maximum(modulus, largest) if tolerance.of_series else modulus
+            if tolerance.of_series:
+                modulus = np.maximum(modulus, largest, out=modulus)
+                largest = modulus
             bound = error * (SLACK * UNIT)
-            missing = missing | ~(bound <= tolerance.relative * largest)  # true for nan
-            missing |= largest == np.inf
+            missing |= ~(bound <= modulus * tolerance.relative)  # true for nan
+            missing |= modulus == np.inf
             if lowest + k in self.values:
                 stored = self.values[lowest + k]
                 if np.iscomplexobj(value):

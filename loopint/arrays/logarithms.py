@@ -77,7 +77,7 @@ def _root(p: Real, m1: Real, m2: Real, kallen: Real) -> tuple[Real, Real, Real, 
 
 
 def _between_thresholds(p: Real, m1: Real, m2: Real, excess: Real, kallen: Real) -> FinitePart:
-    """Lambda < 0, so p^2 > 0 and both masses are nonzero."""
+    """Lambda < 0, so p^2 > 0 and both masses are nonzero; otherwise lambda is a rounding error."""
     _, largest, root, rho = _root(p, m1, m2, kallen)
     half = 0.5 / p
     difference = m1 - m2
@@ -95,6 +95,8 @@ def _between_thresholds(p: Real, m1: Real, m2: Real, excess: Real, kallen: Real)
         + 3.0 * np.abs(value)
     )
     error += 8.0
+    if p.min() <= 0:
+        error[p <= 0] = np.inf
     return FinitePart(value, np.zeros_like(p), error)
 
 

@@ -7,7 +7,8 @@ With J = Int Q^(-eps), M1 = Int x Q^(-1-eps), M2 = Int (1-x) Q^(-1-eps), P = Int
 
 S = p^2-m1^2-m2^2, A2 = p^2-m1^2+m2^2.  The first is integration by parts; nothing is divided by
 p^2, and its braces vanish at eps = 0.  The second is homogeneity of Q; for small p^2 there is
-`loopint.arrays.momentum_slope`.
+`loopint.arrays.momentum_slope`.  All of it serves points that `loopint.arrays.ends` leaves, mostly
+those where both roots of Q are far from the interval, and is a check of `ends` elsewhere.
 """
 
 from __future__ import annotations
@@ -61,7 +62,7 @@ def expand(
     else:
         points = complex_points(p, as_complex(m1), as_complex(m2), *shift)
     first, second = nearer_root_distances(points)
-    close = first + second < gauss_rule.FAR_ROOTS  # false for nan
+    close = first + second < gauss_rule.FAR.distances  # false for nan
     a, b, inverse = master.value
     rule = partial(gauss_rule.moment, highest=highest, a=a, b=b, inverse=inverse)
     if master is Master.P:
@@ -71,8 +72,13 @@ def expand(
         rest = close & ~slope
     else:
         slope, rest = np.zeros(p.shape, dtype=bool), close
+    middle = np.zeros(p.shape, dtype=bool)
+    if inverse:  # in J less is lost
+        middle = close & (first + second > gauss_rule.MIDDLE.distances)
+        slope, rest = slope & ~middle, rest & ~middle
     groups: list[tuple[NDArray[np.bool_], Callable[[Points], ArraySeries]]] = [
         (~close, rule),
+        (middle, partial(rule, ellipse=gauss_rule.MIDDLE)),
         (slope, partial(momentum_slope, highest=highest)),
     ]
     from_j = partial(_from_power_integral, master, highest)

@@ -36,6 +36,10 @@ class ArraySeries:
         ]
         return ArraySeries(values, errors)
 
+    def times_sign(self, sign: float) -> ArraySeries:
+        """Multiply by 1 or -1."""
+        return self if sign == 1.0 else ArraySeries([-v for v in self.values], self.errors)
+
     def scaled(self, factor: Number, factor_error: Real | float) -> ArraySeries:
         """Multiply by a factor known within `factor_error` (absolute)."""
         modulus = size(factor)
