@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from loopint.core.errors import MorePrecisionNeeded
 from loopint.core.numbers import float_with_bound, imaginary_part, real_part
-from loopint.integrals.registry import Integral, Point, evaluate
+from loopint.integrals.registry import Evaluator, Integral, Point
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -30,9 +30,10 @@ def evaluate_points(
     bounds: dict[int, Real],
 ) -> None:
     """Fill in the flat arrays at the given places."""
+    evaluator = Evaluator(integral, conventions, digits=BALL_DIGITS)
     for i in index:
         try:
-            series = evaluate(integral, point(int(i)), conventions, digits=BALL_DIGITS).series
+            series = evaluator(point(int(i))).series
         except MorePrecisionNeeded:
             series = None
         for order, value in values.items():
