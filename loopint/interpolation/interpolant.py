@@ -11,6 +11,7 @@ import hashlib
 import json
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 from typing import Any
 
@@ -69,7 +70,7 @@ class Interpolant:
     coefficients: Mapping[int, Complex]
     conventions: Mapping[str, str]
 
-    @property
+    @cached_property
     def pieces_below(self) -> int:
         """The number of pieces below the threshold."""
         return int((self.edges[1:] <= self.threshold[0]).sum())
@@ -91,8 +92,13 @@ class Interpolant:
         InterpolantError
             For an order that is not held, or a point outside the range.
         """
-        s, _, piece, x = self._locate(order, p_squared, outside)
-        value = _clenshaw(self.coefficients[order], piece, x)
+        s = self._checked(order, p_squared, outside)
+        coefficients = self.coefficients[order]
+        value = np.empty(s.size, dtype=np.complex128)
+        for start in range(0, s.size, BLOCK):
+            block = slice(start, start + BLOCK)
+            _, piece, x = self._locate(s[block])
+            value[block] = _clenshaw(coefficients, piece, x)
         value[np.isnan(s)] = complex(np.nan, np.nan)
         return value.reshape(np.shape(p_squared))
 
@@ -102,19 +108,22 @@ class Interpolant:
         It is the derivative of the interpolant; its error is not bounded, and small away from the
         threshold.
         """
-        s, below, piece, x = self._locate(order, p_squared, outside)
+        s = self._checked(order, p_squared, outside)
         slopes = _derivative(self.coefficients[order])
-        w = x * self.halves[piece] + self.centres[piece]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            chain = np.where(below, -0.5, 0.5) / (w * self.halves[piece])
-            value = _clenshaw(slopes, piece, x) * chain
+        value = np.empty(s.size, dtype=np.complex128)
+        for start in range(0, s.size, BLOCK):
+            block = slice(start, start + BLOCK)
+            below, piece, x = self._locate(s[block])
+            half = self.halves[piece]
+            w = x * half + self.centres[piece]
+            with np.errstate(divide="ignore", invalid="ignore"):
+                chain = np.where(below, -0.5, 0.5) / (w * half)
+                value[block] = _clenshaw(slopes, piece, x) * chain
         value[np.isnan(s)] = complex(np.nan, np.nan)
         return value.reshape(np.shape(p_squared))
 
-    def _locate(
-        self, order: int, p_squared: ArrayLike, outside: str
-    ) -> tuple[Real, NDArray[np.bool_], NDArray[np.intp], Real]:
-        """Return s, whether it is below threshold, its piece, and x within the piece."""
+    def _checked(self, order: int, p_squared: ArrayLike, outside: str) -> Real:
+        """Return the points as a flat array, nan where they are outside the range."""
         if order not in self.coefficients:
             raise InterpolantError(
                 f"order {order} is not in the interpolant {self.name}; accepted: "
@@ -129,17 +138,24 @@ class Interpolant:
                     f'{self.range[0]} to {self.range[1]}, or outside = "nan"'
                 )
             s[wrong] = np.nan
-        place = np.where(wrong, self.range[0], s)
-        piece = np.searchsorted(self.edges, place, side="right") - 1
-        distance = (place - self.threshold[0]) - self.threshold[1]
+        return s
+
+    def _locate(self, s: Real) -> tuple[NDArray[np.bool_], NDArray[np.intp], Real]:
+        """Return whether s is below threshold, its piece, and x within the piece."""
+        distance = (s - self.threshold[0]) - self.threshold[1]
         below = distance < 0
+        piece = np.searchsorted(self._inner_edges, s, side="right")
         # the threshold is no double: the sign of the distance decides, not the edge
         side = self.pieces_below
-        piece = np.where(below, np.minimum(piece, side - 1), np.maximum(piece, side))
-        piece = np.clip(piece, 0, len(self.centres) - 1)
+        if 0 < side < len(self.centres):
+            piece = np.where(below, np.minimum(piece, side - 1), np.maximum(piece, side))
         w = np.sqrt(np.abs(distance))
         x = np.clip((w - self.centres[piece]) / self.halves[piece], -1.0, 1.0)
-        return s, below, piece, x
+        return below, piece, x
+
+    @cached_property
+    def _inner_edges(self) -> Real:
+        return self.edges[1:-1]
 
     def _repr_html_(self) -> str:
         rows = "".join(
@@ -162,18 +178,26 @@ class Interpolant:
 
 def _clenshaw(coefficients: Complex, piece: NDArray[np.intp], x: Real) -> Complex:
     """Sum Chebyshev series, each point with the coefficients of its piece."""
+    first, last = int(piece.min()), int(piece.max())
     result = np.empty(x.size, dtype=np.complex128)
-    order = np.argsort(piece, kind="stable") if np.any(np.diff(piece) < 0) else slice(None)
-    sorted_x, sorted_piece = x[order], piece[order]
-    starts = np.searchsorted(sorted_piece, np.arange(len(coefficients) + 1))
-    summed = np.empty(x.size, dtype=np.complex128)
-    for i, c in enumerate(coefficients):
-        for start in range(starts[i], starts[i + 1], BLOCK):
-            block = slice(start, min(start + BLOCK, starts[i + 1]))
-            summed.real[block] = _sum(c.real, sorted_x[block])
-            summed.imag[block] = _sum(c.imag, sorted_x[block])
-    result[order] = summed
+    if first == last:
+        result.real, result.imag = (_sum(c, x) for c in _parts(coefficients[first]))
+        return result
+    order = np.argsort(piece, kind="stable")
+    x, piece = x[order], piece[order]
+    starts = np.searchsorted(piece, np.arange(first, last + 2))
+    for i in range(first, last + 1):
+        block = order[starts[i - first] : starts[i - first + 1]]
+        if block.size:
+            inside = x[starts[i - first] : starts[i - first + 1]]
+            re, im = _parts(coefficients[i])
+            result.real[block] = _sum(re, inside)
+            result.imag[block] = _sum(im, inside)
     return result
+
+
+def _parts(c: Complex) -> tuple[Real, Real]:
+    return c.real, c.imag
 
 
 def _sum(c: Real, x: Real) -> Real:
@@ -182,12 +206,12 @@ def _sum(c: Real, x: Real) -> Real:
         return np.zeros_like(x)
     length = int(np.flatnonzero(c)[-1]) + 1
     double = 2.0 * x
-    above, current = np.zeros_like(x), np.zeros_like(x)
+    above, current, work = np.zeros_like(x), np.zeros_like(x), np.empty_like(x)
     for k in range(length - 1, 0, -1):
-        above *= -1.0
-        above += double * current
-        above += c[k]
-        above, current = current, above
+        np.multiply(double, current, out=work)
+        work -= above
+        work += c[k]
+        above, current, work = current, work, above
     result: Real = x * current - above + c[0]
     return result
 
