@@ -14,6 +14,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 
+from loopint import cli
 from loopint.cli import main
 from loopint.pipeline.config import load_config
 from loopint.pipeline.run import run_config
@@ -119,6 +120,22 @@ def test_points_that_have_changed_are_not_used(tmp_path):
     assert "has changed" in text
     (tmp_path / "points.parquet").unlink()
     assert "could not be read" in write_report(run).read_text(encoding="utf-8")
+
+
+def test_without_a_key_rows_are_counted(tmp_path):
+    make_run(tmp_path)
+    path = tmp_path / "run.toml"
+    path.write_text(path.read_text().replace('key = "id"', "").replace("/run", "/other"))
+    run_config(load_config(path), workers=1)
+    page = Page(write_report(tmp_path / "other").read_text(encoding="utf-8"))
+    assert "Least certain coefficients" in page.text
+
+
+def test_a_page_that_fails_does_not_fail_the_run(tmp_path, monkeypatch, capsys):
+    run = make_run(tmp_path)
+    monkeypatch.setattr("loopint.report.write_report", lambda _: 1 / 0)
+    assert cli._try_report(run) is None
+    assert "the run is complete, but report.html is not" in capsys.readouterr().err
 
 
 def test_one_row_and_no_row(tmp_path):

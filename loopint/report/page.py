@@ -91,6 +91,7 @@ def render(data: RunData) -> str:
         regions=list(_regions(data.summary)),
         integrals=[_described(entry) for entry in config["integral"]],
         sources=SOURCES,
+        key=config["points"].get("key") or "row",
         title=data.summary["title"] or data.directory.name,
     )
 

@@ -213,10 +213,8 @@ def _read_table(
                 coefficient.im.append(im[mask])
                 relative = _relative(re, im, re_bound, im_bound)
                 coefficient.exact += int((relative == 0).sum())
-                decades = np.ceil(np.log10(relative[relative > 0]))
-                clipped = np.clip(decades, LOWEST_DECADE, HIGHEST_DECADE).astype(int)
-                coefficient.decades.update(clipped.tolist())
-                places = np.argsort(-relative, kind="stable")[:LEAST_CERTAIN].tolist()
+                coefficient.decades.update(_decades(relative[relative > 0]))
+                places = _largest(relative)
                 worst += [
                     Uncertain(
                         float(relative[i]),
@@ -250,6 +248,25 @@ def _coefficient_columns(
     part = table.take(pa.array(lines))
     found = [part.column(column).to_numpy() for column in columns]
     return (part.column(key), *found, part.column("region"))
+
+
+def _decades(relative: Real) -> dict[int, int]:
+    """Count numbers by the power of ten above them."""
+    decades = np.ceil(np.log10(relative))
+    clipped = np.clip(decades, LOWEST_DECADE, HIGHEST_DECADE).astype(np.intp) - LOWEST_DECADE
+    counts = np.bincount(clipped)
+    return {int(n) + LOWEST_DECADE: int(counts[n]) for n in np.flatnonzero(counts)}
+
+
+def _largest(values: Real) -> list[int]:
+    """Return the places of the largest numbers, the first of equal ones first."""
+    if values.size > LEAST_CERTAIN:
+        least = np.partition(values, -LEAST_CERTAIN)[-LEAST_CERTAIN]
+        candidates = np.flatnonzero(values >= least)
+    else:
+        candidates = np.arange(values.size)
+    order = np.argsort(-values[candidates], kind="stable")[:LEAST_CERTAIN]
+    return [int(place) for place in candidates[order]]
 
 
 def _relative(re: Real, im: Real, re_bound: Real, im_bound: Real) -> Real:
