@@ -11,7 +11,7 @@ import mpmath
 import numpy as np
 import pytest
 from flint import arb, fmpq
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from loopint.core.errors import InputError
@@ -141,3 +141,30 @@ def test_precision_is_restored_after_an_error() -> None:
     with pytest.raises(RuntimeError), working_precision(777):
         raise RuntimeError
     assert flint.ctx.prec == before
+
+
+@settings(max_examples=300, deadline=None)
+@given(
+    mantissa=st.integers(-(2**130), 2**130) | st.integers(2**52, 2**53).map(lambda n: 2 * n + 1),
+    exponent=st.integers(-1200, 900),
+    radius=st.integers(0, 1000),
+)
+def test_floats_are_nearest_and_bounds_hold(mantissa: int, exponent: int, radius: int) -> None:
+    """Against integers and Fractions, at ties and among subnormal numbers too."""
+    exact = Fraction(mantissa) * Fraction(2) ** exponent
+    with working_precision(200):
+        ball = arb((mantissa, exponent)) + arb(0, arb((radius, exponent)))
+    value, bound = float_with_bound(ball)
+    try:
+        assert value == exact.numerator / exact.denominator  # Python rounds once, ties to even
+    except OverflowError:
+        assert bound == math.inf
+        return
+    if math.isfinite(bound):
+        gap = abs(exact - Fraction(value)) + Fraction(radius) * Fraction(2) ** exponent
+        assert gap <= Fraction(bound)
+        assert Fraction(bound) <= gap * Fraction(1001, 1000) + Fraction(5e-324)
+    if rounds_uniquely(ball):
+        spread = Fraction(radius) * Fraction(2) ** exponent
+        ends = [exact - spread, exact + spread]
+        assert len({float(end.numerator / end.denominator) for end in ends}) == 1

@@ -263,16 +263,16 @@ def test_unusable_kinematics_reject_the_row(tmp_path, replace, by, cell, reason)
 
 
 def test_a_defect_in_one_row_does_not_end_the_run(tmp_path, monkeypatch):
-    evaluate = evaluate_module.registry.evaluate
     calls = []
 
-    def defective(*arguments, **options):
-        calls.append(arguments)
-        if len(calls) == 2:
-            raise ZeroDivisionError("for the test")
-        return evaluate(*arguments, **options)
+    class Defective(evaluate_module.Evaluator):
+        def __call__(self, *arguments):
+            calls.append(arguments)
+            if len(calls) == 2:
+                raise ZeroDivisionError("for the test")
+            return super().__call__(*arguments)
 
-    monkeypatch.setattr(evaluate_module.registry, "evaluate", defective)
+    monkeypatch.setattr(evaluate_module, "Evaluator", Defective)
     outcome = run(write_run(tmp_path, points_table(4)))
     assert outcome.summary["rows_rejected"] == 1
     reason = pq.read_table(tmp_path / "out" / "rejected.parquet").column("reason")[0].as_py()

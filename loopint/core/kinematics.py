@@ -59,9 +59,9 @@ def check_mass_squared(value: ExactComplex, name: str) -> ExactComplex:
         For a negative real value, or a positive imaginary part (an unstable particle has
         m^2 - i m Gamma, so Im m^2 <= 0).
     """
-    if value.im > 0:
+    if value.im > ZERO:
         raise InputError(f"{name} has Im = {_short(value.im)} > 0; accepted: Im m^2 <= 0")
-    if value.im == 0 and value.re < 0:
+    if value.re < ZERO and not value.im:
         raise InputError(f"{name} = {_short(value.re)} is negative; accepted: real m^2 >= 0")
     return value
 

@@ -65,11 +65,15 @@ class BallSeries:
         return self.lowest + len(self.coefficients) - 1
 
     def __getitem__(self, order: int) -> Ball:
-        if order < self.lowest:
+        place = order - self.lowest
+        if place < 0:
             return arb(0)
-        if order > self.highest:
-            raise LostOrderError(f"order {order} is above the highest known order {self.highest}")
-        return self.coefficients[order - self.lowest]
+        try:
+            return self.coefficients[place]
+        except IndexError:
+            raise LostOrderError(
+                f"order {order} is above the highest known order {self.highest}"
+            ) from None
 
     def __add__(self, other: BallSeries) -> BallSeries:
         if self.lowest == other.lowest:

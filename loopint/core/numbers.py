@@ -293,30 +293,11 @@ def float_with_bound(ball: arb) -> tuple[float, float]:
         return 0.0, 0.0
     if not ball.is_finite():
         return math.nan, math.inf
-    mantissa, exponent = _man_exp(ball.mid())
-    value = _nearest_float(mantissa, exponent)
+    value = float(ball.mid())  # to nearest, ties to even; tests compare it with integers
     if math.isinf(value):
         return value, math.inf
-    man, exp = _distance_upper(ball, arb(value))
-    if man == 0:
-        return value, 0.0
-    bound = _nearest_float(man, exp)
-    return value, math.nextafter(bound, math.inf)
-
-
-def _nearest_float(mantissa: int, exponent: int) -> float:
-    size = mantissa.bit_length()
-    try:
-        if exponent >= 0:
-            if exponent < 2048:
-                return float(mantissa << exponent)
-        elif size < 1000 and exponent + size > -1000:
-            return math.ldexp(float(mantissa), exponent)
-        else:
-            return mantissa / (1 << -exponent)  # one rounding, also when the result is subnormal
-    except OverflowError:
-        pass
-    return math.inf if mantissa > 0 else -math.inf
+    gap = (ball - arb(value)).abs_upper()  # its own rounding is in the ball
+    return value, 0.0 if gap == 0 else math.nextafter(float(gap), math.inf)
 
 
 def rounds_uniquely(ball: arb) -> bool:
@@ -325,10 +306,7 @@ def rounds_uniquely(ball: arb) -> bool:
         return True
     if not ball.is_finite():
         return False
-    with working_precision(ball.mid().bits() + 64):  # lower() and upper() round outwards
-        low = _nearest_float(*_man_exp(ball.lower()))
-        high = _nearest_float(*_man_exp(ball.upper()))
-    return low == high
+    return float(ball.lower()) == float(ball.upper())  # they round outwards
 
 
 def decimal_string(ball: arb, digits: int) -> str:

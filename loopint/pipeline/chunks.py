@@ -13,7 +13,7 @@ import pyarrow as pa
 from loopint.pipeline.cross_check import DISAGREES, Check, cross_check, sample
 from loopint.pipeline.doubles import evaluate_doubles, nothing_done, serves
 from loopint.pipeline.errors import ConfigError
-from loopint.pipeline.evaluate import RowRejectedError, evaluate_row, evaluate_some
+from loopint.pipeline.evaluate import RowEvaluator, RowRejectedError
 from loopint.pipeline.manifest import table_metadata
 from loopint.pipeline.plan import plan_integrals
 from loopint.pipeline.points import exact_rows, open_points
@@ -241,6 +241,7 @@ def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> Chu
     for one, chosen in zip(found, sampled, strict=True):
         needed |= ~one.done | chosen
     positions = np.flatnonzero(needed)
+    evaluator = RowEvaluator(opened.plans, digits, accuracy.max_precision_bits)
     results = ChunkResults([])
     others: list[dict[int, WrittenIntegral]] = [{} for _ in found]
     for position, cells in zip(positions.tolist(), block.cells(positions), strict=True):
@@ -250,13 +251,7 @@ def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> Chu
             if chosen[position] or not one.done[position]
         ]
         try:
-            row = evaluate_some(
-                opened.plans,
-                cells,
-                wanted,
-                digits=digits,
-                max_precision_bits=accuracy.max_precision_bits,
-            )
+            row = evaluator.some(cells, wanted)
         except RowRejectedError as error:
             results.refused.append((position, error))
             continue
@@ -281,6 +276,7 @@ def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> Chu
 def _evaluate_rows(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkResults:
     """Evaluate and cross-check rows one after the other."""
     accuracy, check = config.accuracy, config.cross_check
+    evaluator = RowEvaluator(opened.plans, accuracy.digits, accuracy.max_precision_bits)
     accepted: list[int] = []
     results = ChunkResults(opened.layout.columns(), accepted)
     sampled = [
@@ -289,12 +285,7 @@ def _evaluate_rows(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkR
     ]
     for position, cells in enumerate(block.cells()):
         try:
-            row = evaluate_row(
-                opened.plans,
-                cells,
-                digits=accuracy.digits,
-                max_precision_bits=accuracy.max_precision_bits,
-            )
+            row = evaluator.row(cells)
         except RowRejectedError as error:
             results.refused.append((position, error))
             continue

@@ -14,7 +14,7 @@ from loopint.pipeline.chunks import OpenedRun, RowReader, evaluate_block, open_r
 from loopint.pipeline.cross_check import cross_check
 from loopint.pipeline.doubles import serves
 from loopint.pipeline.engines import run_tasks
-from loopint.pipeline.evaluate import RowRejectedError, evaluate_row, row_requests
+from loopint.pipeline.evaluate import RowEvaluator, RowRejectedError, row_requests
 from loopint.pipeline.run import worker_count
 from loopint.pipeline.tables import write_integral
 
@@ -205,18 +205,14 @@ def _time_sample(config: RunConfig, opened: OpenedRun) -> tuple[float, float]:
         keys.append(block.keys)
         rows += block.cells()
 
+    accuracy = config.accuracy
+    evaluator = RowEvaluator(opened.plans, accuracy.digits, accuracy.max_precision_bits)
+
     def evaluate() -> list[list[Computed]]:
         computed = []
         for cells in rows:
             try:
-                computed.append(
-                    evaluate_row(
-                        opened.plans,
-                        cells,
-                        digits=config.accuracy.digits,
-                        max_precision_bits=config.accuracy.max_precision_bits,
-                    )
-                )
+                computed.append(evaluator.row(cells))
             except RowRejectedError:
                 continue
         return computed

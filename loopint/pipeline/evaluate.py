@@ -7,13 +7,15 @@ from typing import TYPE_CHECKING
 
 from loopint.core.errors import InputError, LoopintError, MorePrecisionNeeded
 from loopint.core.numbers import imaginary_part, real_part, rounds_uniquely
-from loopint.integrals import registry
+from loopint.integrals.registry import Evaluator
 
 if TYPE_CHECKING:
     from collections.abc import Iterable, Sequence
 
+    from loopint.core.conventions import Conventions
     from loopint.core.laurent import BallSeries
     from loopint.integrals.proof import Evaluation
+    from loopint.integrals.registry import Integral
     from loopint.pipeline.plan import Cells, IntegralPlan, RowRequest
 
 
@@ -64,68 +66,77 @@ def row_requests(plans: Sequence[IntegralPlan], cells: Cells) -> list[RowRequest
     return requests
 
 
-def evaluate_row(
-    plans: Sequence[IntegralPlan], cells: Cells, *, digits: int, max_precision_bits: int
-) -> list[Computed]:
-    """Evaluate every integral of a row; see `evaluate_some`."""
-    found = evaluate_some(
-        plans, cells, range(len(plans)), digits=digits, max_precision_bits=max_precision_bits
-    )
-    return list(found.values())
-
-
-def evaluate_some(
-    plans: Sequence[IntegralPlan],
-    cells: Cells,
-    wanted: Iterable[int],
-    *,
-    digits: int,
-    max_precision_bits: int,
-) -> dict[int, Computed]:
-    """Evaluate some integrals of a row, by their place in the plans.
+class RowEvaluator:
+    """Evaluates integrals row by row, each with an evaluator that its rows share.
 
     Parameters
     ----------
     plans
         All integrals.
-    cells
-        Exact value, or the error, of every cell the plans use.
-    wanted
-        Places of the integrals to be evaluated; the kinematics of the others are checked too.
     digits, max_precision_bits
-        See `loopint.integrals.registry.evaluate`; on top of the digits the coefficients are proven
+        See `loopint.integrals.registry.Evaluator`; on top of the digits the coefficients are proven
         far enough to have one nearest float64.
-
-    Raises
-    ------
-    RowRejectedError
-        If one of the integrals cannot be evaluated: the row is then rejected as a whole.
     """
-    requests = row_requests(plans, cells)
-    return {
-        place: Computed(requests[place], _evaluate(requests[place], digits, max_precision_bits))
-        for place in wanted
-    }
 
+    def __init__(self, plans: Sequence[IntegralPlan], digits: int, max_precision_bits: int) -> None:
+        self.plans = plans
+        self.digits = digits
+        self.max_precision_bits = max_precision_bits
+        self._evaluators = [
+            self._evaluator(plan.integral, plan.fixed_conventions)
+            if plan.has_fixed_conventions
+            else None
+            for plan in plans
+        ]
 
-def _evaluate(request: RowRequest, digits: int, max_precision_bits: int) -> Evaluation:
-    orders = request.integral.orders
-    try:
-        return registry.evaluate(
-            request.integral,
-            request.point,
-            request.conventions,
-            digits=digits,
-            max_precision_bits=max_precision_bits,
-            accept=lambda series: rounds_to_floats(series, orders),
+    def _evaluator(self, integral: Integral, conventions: Conventions) -> Evaluator:
+        return Evaluator(
+            integral,
+            conventions,
+            digits=self.digits,
+            max_precision_bits=self.max_precision_bits,
         )
-    except LoopintError as error:
-        reason = str(error)
-    except MorePrecisionNeeded:
-        reason = f"undecided at max_precision_bits = {max_precision_bits}; accepted: a larger cap"
-    except (
-        ArithmeticError, AssertionError, LookupError, RuntimeError, TypeError, ValueError,
-    ) as error:  # fmt: skip
-        # One row must not end a run of millions, and must not be lost either.
-        reason = f"unexpected {type(error).__name__}: {error} (a defect; please report it)"
-    raise RowRejectedError(request.name, reason)
+
+    def row(self, cells: Cells) -> list[Computed]:
+        """Evaluate every integral of a row; see `some`."""
+        return list(self.some(cells, range(len(self.plans))).values())
+
+    def some(self, cells: Cells, wanted: Iterable[int]) -> dict[int, Computed]:
+        """Evaluate some integrals of a row, by their place in the plans.
+
+        Parameters
+        ----------
+        cells
+            Exact value, or the error, of every cell the plans use.
+        wanted
+            Places of the integrals to be evaluated; the kinematics of the others are checked too.
+
+        Raises
+        ------
+        RowRejectedError
+            If one of the integrals cannot be evaluated: the row is then rejected as a whole.
+        """
+        requests = row_requests(self.plans, cells)
+        return {
+            place: Computed(requests[place], self._evaluate(place, requests[place]))
+            for place in wanted
+        }
+
+    def _evaluate(self, place: int, request: RowRequest) -> Evaluation:
+        orders = request.integral.orders
+        try:
+            evaluator = self._evaluators[place]
+            if evaluator is None:
+                evaluator = self._evaluator(request.integral, request.conventions)
+            return evaluator(request.point, lambda series: rounds_to_floats(series, orders))
+        except LoopintError as error:
+            reason = str(error)
+        except MorePrecisionNeeded:
+            cap = self.max_precision_bits
+            reason = f"undecided at max_precision_bits = {cap}; accepted: a larger cap"
+        except (
+            ArithmeticError, AssertionError, LookupError, RuntimeError, TypeError, ValueError,
+        ) as error:  # fmt: skip
+            # One row must not end a run of millions, and must not be lost either.
+            reason = f"unexpected {type(error).__name__}: {error} (a defect; please report it)"
+        raise RowRejectedError(request.name, reason)

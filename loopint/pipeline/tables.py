@@ -34,6 +34,7 @@ if TYPE_CHECKING:
 
     from loopint.pipeline.evaluate import Computed
 
+TINY = 1e-290
 FLOAT_DIGITS = 17  # a float64 holds no more
 DECIMAL_GUARD = 2
 ROWS_PER_GROUP = 100_000
@@ -69,6 +70,18 @@ class Written:
     re_decimal: str | None
     im_decimal: str | None
     digits: int | None
+
+    def as_tuple(self) -> tuple[Any, ...]:
+        """Return the fields in their order."""
+        return (
+            self.re,
+            self.im,
+            self.re_bound,
+            self.im_bound,
+            self.re_decimal,
+            self.im_decimal,
+            self.digits,
+        )
 
     @property
     def is_finite(self) -> bool:
@@ -139,13 +152,16 @@ def proven_digits(ball: Ball) -> int | None:
         return None
     if not ball.is_finite():
         return 0
-    with working_precision(64):
-        size = ball.abs_lower()
-        if not size > 0:
-            return 0
-        ratio = (11 * ball.rad() / (10 * size)).upper()
-    mantissa, exponent = (int(part) for part in ratio.man_exp())
-    decades = (math.log2(mantissa) + exponent) * math.log10(2)
+    size, radius = ball.abs_lower(), ball.rad()
+    if not size > 0:
+        return 0
+    small, large = float(radius), float(size)
+    if small > TINY and TINY < large < 1 / TINY:
+        decades = math.log10(1.1 * small / large)
+    else:  # beyond the range of float64
+        with working_precision(64):
+            mantissa, exponent = map(int, (11 * radius / (10 * size)).upper().man_exp())
+        decades = (math.log2(mantissa) + exponent) * math.log10(2)
     return min(max(math.floor(-decades - 1e-9), 0), 2**15 - 1)
 
 
@@ -178,6 +194,10 @@ class IntegralColumns:
         self.numbers: dict[str, list[Any]] = {
             field: [[] for _ in self.orders] for field in Written.__slots__
         }
+        self._appends = [
+            [self.numbers[field][place].append for field in Written.__slots__]
+            for place in range(len(self.orders))
+        ]
         self.region: Any = []
         self.method: Any = []
         self.status: Any = []
@@ -189,9 +209,9 @@ class IntegralColumns:
         self.method.append(integral.method)
         self.status.append(integral.status)
         self.precision_bits = max(self.precision_bits, integral.precision_bits)
-        for name, columns in self.numbers.items():
-            for column, number in zip(columns, integral.numbers, strict=True):
-                column.append(getattr(number, name))
+        for number, appends in zip(integral.numbers, self._appends, strict=True):
+            for append, value in zip(appends, number.as_tuple(), strict=True):
+                append(value)
 
     def counts(self) -> dict[str, dict[str, int]]:
         """Return region -> status -> number of rows."""
