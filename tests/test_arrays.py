@@ -23,6 +23,7 @@ from loopint.arrays.end_tables import (
     end_tables,
 )
 from loopint.arrays.ends import LOG1P, complex_log1p
+from loopint.arrays.evaluate import Tolerance
 from loopint.arrays.points import complex_points, real_points
 from loopint.arrays.rounding import (
     QUOTIENT,
@@ -41,7 +42,7 @@ from loopint.core.kinematics import OnePoint, TwoPoint
 from loopint.core.numbers import exact_complex, exact_real
 from loopint.core.precision import working_precision
 from loopint.integrals.quadratic import quadratic_tables
-from loopint.integrals.registry import Integral, evaluate
+from loopint.integrals.registry import Evaluator, Integral, evaluate
 from tests.reference import bubble_by_quadrature
 
 MASTERS = [
@@ -132,6 +133,52 @@ def structured(rng) -> np.ndarray:
     near_one = 1 + np.ldexp(rng.uniform(-1, 1, 3000), -rng.integers(0, 53, 3000))
     wide = np.ldexp(rng.uniform(0.5, 1, 3000), rng.integers(-900, 900, 3000))
     return np.concatenate([near_one[near_one > 0], wide, np.arange(1.0, 200.0)])
+
+
+def exact_extended(x) -> arb:
+    """Return an extended number as a ball; its leading 53 bits and the rest are doubles."""
+    return arb(float(x)) + arb(float(x - np.longdouble(float(x))))
+
+
+@pytest.mark.skipif(not bubble_module.EXTENDED, reason="no extended precision")
+@pytest.mark.parametrize("name", ["log", "log1p", "arctan2"])
+def test_extended_functions_are_within_four_ulp(name: str) -> None:
+    rng = np.random.default_rng(5)
+    x = structured(rng).astype(np.longdouble) * (1 + np.longdouble(2.0**-60))
+    y = rng.permutation(x)
+    y = np.where(np.abs(np.log2(x) - np.log2(y)) < 900, y, x)  # the quotient is a double
+    values = getattr(np, name)(*((x, y) if name == "arctan2" else (x,)))
+    assert float(np.finfo(np.longdouble).eps / 2) == bubble_module.EXTENDED_UNIT * UNIT
+    with working_precision(160):
+        for a, b, value in zip(x, y, values, strict=True):
+            if name == "arctan2":
+                exact = acb(exact_extended(b), exact_extended(a)).log().imag
+            else:
+                exact = getattr(exact_extended(a), name)()
+            ulp = 2 * bubble_module.EXTENDED_UNIT * UNIT * abs(float(value))
+            assert abs(exact_extended(value) - exact) <= 4 * ulp
+
+
+@pytest.mark.skipif(not bubble_module.EXTENDED, reason="no extended precision")
+@pytest.mark.parametrize("measure", ["msbar", "plain"])
+@pytest.mark.parametrize("mu_squared", ["1", "7/3"])
+def test_fifteen_digits_of_the_finite_part(measure: str, mu_squared: str) -> None:
+    p, m1, m2 = samples("uniform", 3000, 4)
+    integral = Integral.parse("bubble", (1, 1), 4, (-1, 0), ())
+    conventions = Conventions.parse(measure, "minkowski", mu_squared)
+    tolerance = Tolerance(9e-16, of_series=False)
+    arrays = bubble_module.bubble_doubles(integral, conventions, (p, m1, m2), tolerance)
+    assert arrays.missing[m1 > 0].mean() < 0.05
+    evaluator = Evaluator(integral, conventions, digits=20)
+    worst = 0.0
+    for i in np.flatnonzero(~arrays.missing)[::5]:
+        ball = evaluator(TwoPoint(exact_real(p[i]), exact_complex(m1[i]), exact_complex(m2[i])))
+        value = complex(arrays.values[0][i])
+        with working_precision(160):
+            gap = abs(acb(ball.series[0]) - acb(value.real, value.imag))
+            assert gap <= arrays.bounds[0][i]
+            worst = max(worst, float(gap) / arrays.bounds[0][i])
+    assert worst > 0.3
 
 
 @pytest.mark.parametrize("name", ["log", "log1p", "arctan"])
@@ -662,6 +709,7 @@ def test_number_types_keep_their_values() -> None:
         ((1.0, "a", 1.0), {}, ["m1_squared has dtype"]),
         ((1j, 1.0, 1.0), {}, ["p_squared has dtype complex128"]),
         ((2**60 + 1, 1.0, 1.0), {}, ["p_squared has integers beyond 2^53"]),
+        ((2**53 + 1, 1.0, 1.0), {}, ["p_squared has integers beyond 2^53"]),
         (([1.0, 2.0], [1.0, 2.0, 3.0], 1.0), {}, ["p_squared (2,)", "m1_squared (3,)"]),
         ((1.0, 1.0, 1.0), {"on_invalid": "skip"}, ["on_invalid = 'skip'", "raise, nan"]),
         ((1.0, 1.0, 1.0), {"relative_to": "x"}, ["relative_to = 'x'", "series, coefficient"]),

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from fractions import Fraction
 from pathlib import Path
 
 import numpy as np
@@ -10,15 +9,10 @@ import pandas as pd
 import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
-from flint import fmpq
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 from loopint.pipeline.config import load_config
 from loopint.pipeline.doubles import METHOD
 from loopint.pipeline.estimate import survey_config
-from loopint.pipeline.exact_doubles import ExactDoubles
-from loopint.pipeline.expressions import parse_expression
 from loopint.pipeline.run import run_config
 
 CONFIG = """
@@ -172,37 +166,3 @@ def test_survey_knows_that_columns_are_fast(folder: Path) -> None:
     assert fast.rows == 600
     assert fast.rows_rejected == 4
     assert fast.row_seconds > 0
-
-
-numbers = st.floats(allow_nan=False, allow_infinity=False) | st.integers(-9, 9).map(float)
-TEXTS = [
-    "x + y",
-    "x - y",
-    "x*y",
-    "x/y",
-    "(x + y)**2",
-    "x**3 - 2*y",
-    "-x/4",
-    "0.1*x",
-    "1/y",
-    "x**-1",
-]
-
-
-@settings(max_examples=300, deadline=None)
-@given(x=numbers, y=numbers, text=st.sampled_from(TEXTS))
-def test_what_is_called_exact_is_exact(x: float, y: float, text: str) -> None:
-    expression = parse_expression(text)
-    columns = {n: ExactDoubles.of(np.array([v])) for n, v in (("x", x), ("y", y))}
-    found = expression.compute(columns)
-    if found.exact[0]:
-        cells = {n: fmpq(*Fraction(v).as_integer_ratio()) for n, v in (("x", x), ("y", y))}
-        exact = expression.evaluate(cells)
-        assert fmpq(*float(found.value[0]).as_integer_ratio()) == exact
-
-
-def test_small_integers_stay_exact() -> None:
-    columns = {n: ExactDoubles.of(np.array([1.5, 3.0])) for n in ("x", "y")}
-    for text in TEXTS:
-        if text not in {"0.1*x", "1/y", "x**-1"}:
-            assert parse_expression(text).compute(columns).exact.all(), text

@@ -5,11 +5,12 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from functools import lru_cache, partial
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from loopint.arrays.conditioning import moved
 from loopint.arrays.end_tables import end_tables
 from loopint.arrays.ends import GROUPED, Variable, Work, expand_plain
 from loopint.arrays.ends import expand as expand_ends
@@ -20,6 +21,7 @@ from loopint.arrays.evaluate import (
     Tolerance,
     finish,
     logarithm_of_scale,
+    logarithm_remainder,
     scaled_by_power_of_two,
 )
 from loopint.arrays.logarithms import FinitePart, finite_part
@@ -36,7 +38,7 @@ from loopint.arrays.result import (
 )
 from loopint.arrays.rounding import Number, Real
 from loopint.arrays.series import ArraySeries, constants_times_exponential
-from loopint.arrays.tables import TABLE_BITS, rounded_series
+from loopint.arrays.tables import TABLE_BITS, remainders, rounded_series
 from loopint.core.conventions import Conventions, Measure
 from loopint.core.gamma_factors import EpsilonFactor
 from loopint.core.kinematics import TwoPoint
@@ -48,6 +50,8 @@ if TYPE_CHECKING:
     from loopint.core.numbers import RealInput
 
 HIGHEST_ORDER = 2
+EXTENDED_UNIT = 2.0 ** (52 - np.finfo(np.longdouble).nmant)  # of a rounding, in units of UNIT
+EXTENDED = EXTENDED_UNIT < 1e-3 and np.finfo(np.longdouble).nmant in (63, 112)
 LOG_TWO = 0.6931471805599453
 PLAIN_RANGE = 2.0**200
 LOGARITHM_BLOCK = 2 * BLOCK
@@ -59,12 +63,14 @@ SAFE_EXPONENT = 900  # results in units of 1/mass^2 neither overflow nor underfl
 class Recipe:
     """factor * Master, where Laurent coefficients start at eps^lowest.
 
-    `prefactor` holds the rounded coefficients of everything that multiplies the master integral.
+    `prefactor` holds the rounded coefficients of everything that multiplies the master integral,
+    `remainder` what the rounding leaves.
     """
 
     master: Master
     lowest: int
     prefactor: list[float]
+    remainder: list[float]
     sign: int
     measure: Measure
 
@@ -92,16 +98,18 @@ def recipe(integral: Integral, conventions: Conventions) -> Recipe | None:
     master, sign = found
     lowest = -1 if master is Master.J else 0
     prefactor = _prefactor(conventions.measure, lowest, integral.orders[1])
-    return Recipe(master, lowest, prefactor, sign, conventions.measure)
+    return Recipe(master, lowest, *prefactor, sign, conventions.measure)
 
 
 @lru_cache(maxsize=64)
-def _prefactor(measure: Measure, lowest: int, highest: int) -> list[float]:
+def _prefactor(measure: Measure, lowest: int, highest: int) -> tuple[list[float], list[float]]:
     """Expand measure * Gamma(eps) or measure * Gamma(1+eps) from eps^lowest."""
     gamma = EpsilonFactor.gamma(1 + lowest, 1)
     with working_precision(TABLE_BITS):
         series = (measure.factor(4) * gamma).series_through(max(highest, lowest))
-        return rounded_series(series.shifted(-lowest), max(highest - lowest, 0))
+        series = series.shifted(-lowest)
+        rounded = rounded_series(series, max(highest - lowest, 0))
+        return rounded, remainders(series, rounded)
 
 
 def bubble_array(
@@ -201,8 +209,12 @@ def bubble_doubles(
     conventions: Conventions,
     kinematics: tuple[Real, Number, Number],
     tolerance: Tolerance,
+    argument_error: Real | None = None,
 ) -> Arrays:
-    """Evaluate valid points in doubles; the others, and all without a recipe, are `missing`."""
+    """Evaluate valid points in doubles; the others, and all without a recipe, are `missing`.
+
+    Bounds hold for all arguments within the relative errors `argument_error`, in units of UNIT.
+    """
     p, m1, m2 = kinematics
     arrays = Arrays.empty(integral.orders, p.size)
     plan = recipe(integral, conventions)
@@ -212,24 +224,45 @@ def bubble_doubles(
     if integral.orders[1] >= plan.lowest:
         with np.errstate(all="ignore"):
             log_mu = logarithm_of_scale(conventions.mu_squared)
-            _fill(arrays, plan, kinematics, log_mu, tolerance)
+            remainder = logarithm_remainder(conventions.mu_squared)
+            _fill(arrays, plan, kinematics, (log_mu, remainder), tolerance)
+            if argument_error is not None:
+                _widen(arrays, plan, kinematics, log_mu, tolerance, argument_error)
     arrays.make_zero(np.flatnonzero((p == 0) & (m1 == 0) & (m2 == 0)))  # scaleless
     return arrays
+
+
+def _widen(
+    arrays: Arrays,
+    plan: Recipe,
+    kinematics: tuple[Real, Number, Number],
+    log_mu: float,
+    tolerance: Tolerance,
+    argument_error: Real,
+) -> None:
+    """Add to the bounds what the errors of the arguments cost."""
+    index = np.flatnonzero((argument_error > 0) & ~arrays.missing)
+    for start in range(0, index.size, BLOCK):
+        where = index[start : start + BLOCK]
+        p, m1, m2 = (array[where] for array in kinematics)
+        more = moved(plan.master, (p, m1, m2), argument_error[where], log_mu, plan.prefactor)
+        arrays.widen(where, {plan.lowest + k: e for k, e in enumerate(more)}, tolerance)
 
 
 def _fill(
     arrays: Arrays,
     plan: Recipe,
     kinematics: tuple[Real, Number, Number],
-    log_mu: float,
+    scale: tuple[float, float],
     tolerance: Tolerance,
 ) -> None:
-    """Evaluate block by block.
+    """Evaluate block by block; `scale` is log mu^2 as a sum of two numbers.
 
     Real masses take real formulas also in complex arrays, and two orders of B(1,1) the formula
     with logarithms first: what is computed for a point does not depend on the others.
     """
     p, m1, m2 = kinematics
+    log_mu = scale[0]
     if np.iscomplexobj(m1) or np.iscomplexobj(m2):
         real = (m1.imag == 0) & (m2.imag == 0)
         index = np.flatnonzero(~real)
@@ -247,6 +280,9 @@ def _fill(
         if len(plan.prefactor) == 2:
             _fill_with_logarithms(arrays, plan, index, kinematics, log_mu, tolerance)
             index = index[arrays.missing[index]]
+            if EXTENDED:
+                _fill_in_extended_precision(arrays, plan, index, kinematics, scale, tolerance)
+                index = index[arrays.missing[index]]
             arrays.values[0][index] = 0.0
     index = _fill_by_ends(arrays, plan, index, kinematics, log_mu, tolerance)
     _fill_general(arrays, plan, index, kinematics, log_mu, tolerance)
@@ -358,6 +394,7 @@ def _fill_with_logarithms(
 ) -> None:
     all_plain = all(_outside_plain_range(array).size == 0 for array in kinematics)
     whole = index.size == kinematics[0].size
+    pole, constant = (plan.sign * c for c in plan.prefactor)
     for start in range(0, index.size, LOGARITHM_BLOCK):
         stop = start + LOGARITHM_BLOCK
         where = slice(start, stop) if whole else index[start:stop]
@@ -366,8 +403,36 @@ def _fill_with_logarithms(
         if not all_plain:
             for array in block:
                 found.error[_outside_plain_range(array)] = np.nan
-        _finish_finite_part(found, plan, log_mu)
+        _finish_finite_part(found, pole, constant, log_mu)
         arrays.store_parts(where, 0, found, tolerance, abs(plan.prefactor[0]))
+
+
+def _fill_in_extended_precision(
+    arrays: Arrays,
+    plan: Recipe,
+    index: NDArray[np.intp],
+    kinematics: tuple[Real, Real, Real],
+    scale: tuple[float, float],
+    tolerance: Tolerance,
+) -> None:
+    """Evaluate the formula with logarithms in 64 bits or more, and round to doubles."""
+    extended: Any = np.longdouble
+    pairs = zip(plan.prefactor, plan.remainder, strict=True)
+    pole, constant = (plan.sign * (extended(c) + low) for c, low in pairs)
+    log_mu = extended(scale[0]) + scale[1]
+    for start in range(0, index.size, BLOCK):
+        where = index[start : start + BLOCK]
+        block = [array[where] for array in kinematics]
+        p, m1, m2 = (array.astype(extended) for array in block)
+        found = finite_part(p, m1, m2)
+        _finish_finite_part(found, pole, constant, log_mu)
+        error = found.error
+        error *= EXTENDED_UNIT
+        error += np.abs(found.re) + found.im  # rounding to doubles
+        for array in block:
+            error[_outside_plain_range(array)] = np.nan
+        rounded = FinitePart(*(part.astype(np.float64) for part in (found.re, found.im, error)))
+        arrays.store_parts(where, 0, rounded, tolerance, abs(plan.prefactor[0]))
 
 
 def _outside_plain_range(array: Real) -> NDArray[np.intp]:
@@ -381,9 +446,8 @@ def _outside_plain_range(array: Real) -> NDArray[np.intp]:
     return np.flatnonzero(~(inside | (sizes == 0)))
 
 
-def _finish_finite_part(found: FinitePart, plan: Recipe, log_mu: float) -> None:
+def _finish_finite_part(found: FinitePart, pole: float, constant: float, log_mu: float) -> None:
     """Go from the order eps of J to the finite part of the integral, in place."""
-    pole, constant = (plan.sign * c for c in plan.prefactor)
     if log_mu != 0.0:
         found.re[...] += log_mu
         found.error[...] += abs(log_mu) + np.abs(found.re)

@@ -148,6 +148,19 @@ class Arrays:
         self.values[order].imag[where] = found.im
         self.bounds[order][where] = bound
 
+    def widen(self, where: NDArray[np.intp], more: dict[int, Real], tolerance: Tolerance) -> None:
+        """Add to bounds, in units of UNIT, and mark what then misses the tolerance."""
+        largest = np.zeros(where.size)
+        missing = np.zeros(where.size, dtype=bool)
+        for order, bounds in self.bounds.items():
+            modulus = size(self.values[order][where])
+            if tolerance.of_series:
+                modulus = largest = np.maximum(modulus, largest)
+            if order in more:
+                bounds[where] += (SLACK * UNIT) * more[order]
+            missing |= ~(bounds[where] <= modulus * tolerance.relative)
+        self.missing[where] |= missing
+
 
 def finish(
     arrays: Arrays,
@@ -170,6 +183,13 @@ def logarithm_of_scale(mu_squared: object) -> float:
     exact: fmpq = exact_real(mu_squared)
     with working_precision(160):
         return float(arb(exact).log().mid())
+
+
+def logarithm_remainder(mu_squared: object) -> float:
+    """Return what `logarithm_of_scale` leaves of log mu^2, again rounded."""
+    with working_precision(160):
+        exact: fmpq = exact_real(mu_squared)
+        return float((arb(exact).log() - arb(logarithm_of_scale(mu_squared))).mid())
 
 
 def scaled_by_power_of_two(arrays: list[Number]) -> tuple[list[Number], NDArray[np.int32], Real]:

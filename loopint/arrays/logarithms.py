@@ -8,11 +8,12 @@ lambda >= 0:  V_i = sign(A_i) 2 m_i^2/d_i, d_i = |A_i| + R,
 lambda < 0:   V_i = A_i/(2 p^2),  X = (R/p^2) arctan2(R, -S)
 
 R = sqrt|lambda|, A_1,2 = p^2 +- (m1^2-m2^2), S = p^2-m1^2-m2^2: the two ends and T of
-`loopint.integrals.quadratic`, whose log(1-w_i) = log(2R/d_i) combine.  All in plain doubles.
+`loopint.integrals.quadratic`, whose log(1-w_i) = log(2R/d_i) combine.  All in the arithmetic of the
+arguments: plain doubles, or extended precision for the few points where a bound is too large.
 
-Bound, in units of u, with M = |p^2|+m1^2+m2^2 and D = |m1^2-m2^2|: lambda errs by 7 M^2, R by
-rho = 3.6 M^2/|lambda| + 2 relative to itself, A_i by D + |A_i|, d_i by 3 + rho + D/d_i relative to
-itself, and the angle by rho/2 + R M/(2 m1^2 m2^2).
+Bound, in units of u of that arithmetic, with M = |p^2|+m1^2+m2^2 and D = |m1^2-m2^2|: lambda errs
+by 7 M^2, R by rho = 3.6 M^2/|lambda| + 2 relative to itself, A_i by D + |A_i|, d_i by
+3 + rho + D/d_i relative to itself, and the angle by rho/2 + R M/(2 m1^2 m2^2).
 """
 
 from __future__ import annotations
@@ -24,11 +25,12 @@ import numpy as np
 from loopint.arrays.rounding import Real
 
 STEP = 16.0  # a logarithm within 4 ulp, times a rounded coefficient, added
+PI_LOW = 1.2246467991473532e-16  # pi less its double, lost in doubles
 
 
 @dataclass(frozen=True, slots=True)
 class FinitePart:
-    """The order eps of J: real and imaginary part, and the error in units of UNIT."""
+    """The order eps of J: real and imaginary part, and the error in units of u."""
 
     re: Real
     im: Real
@@ -125,7 +127,7 @@ def _outside(p: Real, m1: Real, m2: Real, kallen: Real) -> FinitePart:
     delta /= smaller
     sensitivity = np.minimum(ratio, 1.0, out=ratio)  # of X |p^2|/R to d_1 and d_2
     sensitivity[same] = 2.0
-    imaginary = np.where(mask & (p > 0), np.pi * factor, 0.0)
+    imaginary = np.where(mask & (p > 0), (factor.dtype.type(np.pi) + PI_LOW) * factor, 0.0)
     delta += rho
     delta += 6.0
     error = (np.abs(term1) + np.abs(term2)) * (delta + STEP)

@@ -81,7 +81,9 @@ def real_array(name: str, values: ArrayLike) -> Real:
         return array
     if array.dtype.kind in "iuf" and array.dtype.itemsize <= 8:
         converted: Real = array.astype(np.float64)
-        if array.dtype.kind == "f" or array.size == 0 or np.abs(converted).max() <= 2.0**53:
+        if array.dtype.kind == "f" or array.size == 0:
+            return converted
+        if array.min() >= -(2**53) and array.max() <= 2**53:
             return converted
         raise InputError(f"{name} has integers beyond 2^53; accepted: {ACCEPTED_REAL}")
     raise InputError(f"{name} has dtype {array.dtype}; accepted: {ACCEPTED_REAL}")

@@ -96,6 +96,11 @@ def rounded_series(series: BallSeries, highest: int) -> list[float]:
     return [float(real_part(series[k]).mid()) for k in range(highest + 1)]
 
 
+def remainders(series: BallSeries, rounded: list[float]) -> list[float]:
+    """Return what `rounded_series` leaves, again rounded."""
+    return [float((real_part(series[k]) - arb(c)).mid()) for k, c in enumerate(rounded)]
+
+
 def _polynomials(
     table: EpsilonTable, highest: int, real: bool, slopes: bool = False
 ) -> PolynomialTable:

@@ -29,6 +29,7 @@ from loopint.arrays.rounding import (
     PRODUCT,
     QUOTIENT,
     Number,
+    Real,
     logarithm,
     quotient,
     size,
@@ -106,14 +107,22 @@ def tadpole_array(
 
 
 def tadpole_doubles(
-    integral: Integral, conventions: Conventions, m: Number, tolerance: Tolerance
+    integral: Integral,
+    conventions: Conventions,
+    m: Number,
+    tolerance: Tolerance,
+    argument_error: Real | None = None,
 ) -> Arrays:
-    """Evaluate valid points in doubles; the others are `missing`."""
+    """Evaluate valid points in doubles; the others are `missing`.
+
+    Bounds hold for all m^2 within the relative errors `argument_error`, in units of UNIT.
+    """
     arrays = Arrays.empty(integral.orders, m.size)
     if integral.term.powers[0] > 0:
         with np.errstate(all="ignore"):
             log_mu = logarithm_of_scale(conventions.mu_squared)
-            _fill(arrays, integral, conventions, m, log_mu, tolerance)
+            moved = np.zeros(m.size) if argument_error is None else argument_error
+            _fill(arrays, integral, conventions, m, log_mu, tolerance, moved)
     return arrays
 
 
@@ -124,6 +133,7 @@ def _fill(
     masses: Number,
     log_mu: float,
     tolerance: Tolerance,
+    argument_error: Real,
 ) -> None:
     """Evaluate factor * (m^2)^(d0/2-n) exp(-eps log(m^2/mu^2)) block by block."""
     term, dimension = integral.term, integral.dimension
@@ -145,17 +155,20 @@ def _fill(
         coefficients = rounded_series(expanded.shifted(-lowest), highest - lowest)
     for start in range(0, masses.size, BLOCK):
         where = slice(start, start + BLOCK)
-        series = _block(masses[where], twice, coefficients, log_mu)
+        series = _block(masses[where], twice, coefficients, log_mu, argument_error[where])
         arrays.store(where, lowest, series, tolerance)
         arrays.make_zero(np.flatnonzero(masses[where] == 0) + start)
 
 
-def _block(m: Number, twice: int, coefficients: list[float], log_mu: float) -> ArraySeries:
+def _block(
+    m: Number, twice: int, coefficients: list[float], log_mu: float, argument_error: Real
+) -> ArraySeries:
     log_m, log_error = logarithm(m)
     rate = log_mu - log_m
     power, steps = _half_integer_power(m, twice)
-    error = log_error + abs(log_mu) + size(rate)
-    series = constants_times_exponential(coefficients, rate, error).scaled(power, steps)
+    error = log_error + abs(log_mu) + size(rate) + argument_error
+    relative = steps + 0.5 * abs(twice) * argument_error
+    series = constants_times_exponential(coefficients, rate, error).scaled(power, relative)
     unsafe = np.abs(np.log2(size(m))) * max(abs(twice), 2) > 2 * SAFE_EXPONENT
     for error in series.errors:
         error[unsafe] = np.nan

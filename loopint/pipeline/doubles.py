@@ -1,8 +1,9 @@
 """Whole columns in doubles with proven bounds: what a run does where up to 15 digits are asked.
 
-A row of an integral is done here if its kinematics are exactly doubles, its region is generic or
-p^2 = 0, and every bound is within 10^-digits of its coefficient; every other row is evaluated on
-its own in ball arithmetic, which also finds the reason if it has to be rejected.
+A row of an integral is done here if its region is certain, and generic or p^2 = 0, and if every
+bound, with what the rounding of its kinematics costs, is within 10^-digits of its coefficient;
+every other row is evaluated on its own in ball arithmetic, which also finds the reason if it has to
+be rejected.
 """
 
 from __future__ import annotations
@@ -15,12 +16,14 @@ import pyarrow as pa
 from numpy.typing import NDArray
 
 from loopint.arrays.bubble import bubble_doubles, recipe
-from loopint.arrays.evaluate import BLOCK, Tolerance
+from loopint.arrays.evaluate import BLOCK, Arrays, Tolerance
 from loopint.arrays.points import real_points
 from loopint.arrays.result import invalid_mass
+from loopint.arrays.rounding import UNIT
 from loopint.arrays.tadpole import tadpole_doubles
 from loopint.core.kinematics import Region
-from loopint.pipeline.exact_doubles import ExactDoubles
+from loopint.pipeline.cells import rounded_column
+from loopint.pipeline.rounded import Rounded
 from loopint.pipeline.tables import IntegralColumns, Written, WrittenIntegral
 
 if TYPE_CHECKING:
@@ -35,6 +38,7 @@ MOST_DIGITS = 15
 MARGIN = 1.1  # as in `tables.proven_digits`
 DOUBLE_BITS = 53
 METHOD = "double"
+SAFE_SCALE = 2.0**400  # squares of squared masses are in range
 REGIONS = (
     Region.SCALELESS,
     Region.MASSIVE,
@@ -51,8 +55,10 @@ UNDECIDED = -1
 
 def serves(plan: IntegralPlan, digits: int) -> bool:
     """Whether rows of an integral can be done in doubles."""
-    if digits > MOST_DIGITS or not plan.has_fixed_conventions or plan.snaps:
+    if digits > MOST_DIGITS or plan.snaps:
         return False
+    if not plan.has_fixed_conventions and plan.integral.mass_dimension.q != 1:
+        return False  # roots of mu^2
     if plan.integral.family == "bubble":
         return recipe(plan.integral, plan.fixed_conventions) is not None
     return plan.integral.family == "tadpole"
@@ -197,26 +203,29 @@ def evaluate_doubles(plan: IntegralPlan, table: pa.Table, rows: int, digits: int
     digits
         The digits asked for.
     """
-    columns = {name: _doubles(table.column(name)) for name in plan.columns}
-    p, masses, usable = _kinematics(plan, columns, rows)
-    for mass in masses:
-        usable &= ~invalid_mass(mass)
-    regions = _regions(p, masses)
-    usable &= regions != UNDECIDED
+    found = _kinematics(plan, table, rows)
+    regions, usable = found.regions, found.usable
     if plan.integral.derivatives:
-        for mass in masses:
-            usable &= mass != 0  # such a point may be isolated
+        for mass in found.masses:
+            usable = usable & (mass != 0)  # such a point may be isolated
     tolerance = Tolerance(10.0**-digits / (1.01 * MARGIN), of_series=False)
+    p, masses, error, conventions = found.p, found.masses, found.error, plan.fixed_conventions
+    if found.mu_squared is not None:
+        p, masses, error = found.in_units_of_mu()
     safe = [np.where(usable, mass, 1.0) for mass in masses]
+    error_or_none = np.where(usable, error, 0.0) if error.any() else None
     if p is None:
-        arrays = tadpole_doubles(plan.integral, plan.fixed_conventions, safe[0], tolerance)
+        arrays = tadpole_doubles(plan.integral, conventions, safe[0], tolerance, error_or_none)
     else:
         arrays = bubble_doubles(
             plan.integral,
-            plan.fixed_conventions,
+            conventions,
             (np.where(usable, p, 0.0), safe[0], safe[1]),
             tolerance,
+            error_or_none,
         )
+    if found.mu_squared is not None:
+        _times_power(arrays, found.mu_squared, int(plan.integral.mass_dimension.p), tolerance)
     done = usable & ~arrays.missing
     real = done & (regions != CODE[Region.ABOVE_THRESHOLD])
     for mass in masses:
@@ -226,43 +235,97 @@ def evaluate_doubles(plan: IntegralPlan, table: pa.Table, rows: int, digits: int
     )
 
 
-def _doubles(column: pa.ChunkedArray) -> ExactDoubles:
-    """Return a column as doubles; what is null or not a double by itself is not exact."""
-    kind = column.type
-    rows = len(column)
-    if pa.types.is_floating(kind) or pa.types.is_integer(kind):
-        missing = column.is_null().to_numpy()
-        plain = column.fill_null(0).to_numpy()
-        values = plain.astype(np.float64)
-        exact = ~missing & np.isfinite(values)
-        if pa.types.is_integer(kind):
-            exact &= np.abs(values) <= 2.0**53
-        return ExactDoubles(values, exact)
-    return ExactDoubles(np.zeros(rows), np.zeros(rows, dtype=bool))
+def certain_regions(
+    plan: IntegralPlan, table: pa.Table, rows: int
+) -> tuple[NDArray[np.int8], Mask]:
+    """Return codes of `REGIONS`, and in which rows they and the validity of the row are certain."""
+    found = _kinematics(plan, table, rows)
+    return found.regions, found.usable
 
 
-def _kinematics(
-    plan: IntegralPlan, columns: Mapping[str, ExactDoubles], rows: int
-) -> tuple[Real | None, list[Number], Mask]:
-    """Return p^2, the squared masses, and where they are exact."""
-    usable = np.ones(rows, dtype=bool)
-    p: Real | None = None
+@dataclass
+class _Kinematics:
+    """p^2 (None for a tadpole), squared masses and mu^2 (None if fixed) of all rows.
+
+    Attributes
+    ----------
+    error
+        Largest relative error of p^2 and the squared masses, in units of UNIT.
+    regions
+        Codes of `REGIONS`.
+    usable
+        The rows where everything is valid and the region is certain.
+    """
+
+    p: Real | None
+    masses: list[Number]
+    mu_squared: Rounded | None
+    error: Real
+    regions: NDArray[np.int8]
+    usable: Mask
+
+    def in_units_of_mu(self) -> tuple[Real | None, list[Number], Real]:
+        """Return p^2, squared masses and their relative errors divided by mu^2."""
+        assert self.mu_squared is not None
+        scale = self.mu_squared.value
+        worst = self.error + self.mu_squared.error + 1.0
+        exact = (self.error + self.mu_squared.error == 0) & (np.frexp(scale)[0] == 0.5)
+        with np.errstate(all="ignore"):
+            masses = [
+                mass.real / scale + 1j * (mass.imag / scale)
+                if np.iscomplexobj(mass)
+                else mass / scale
+                for mass in self.masses
+            ]
+            p = None if self.p is None else self.p / scale
+        return p, masses, np.where(exact, 0.0, worst * (1.0 + 2.0**-20))
+
+
+def _times_power(arrays: Arrays, mu_squared: Rounded, power: int, tolerance: Tolerance) -> None:
+    """Multiply by (mu^2)^power."""
+    if power == 0:
+        return
+    factor = mu_squared**power
+    scale = np.abs(factor.value)
+    with np.errstate(all="ignore"):
+        for order, value in arrays.values.items():
+            value.real *= factor.value
+            value.imag *= factor.value
+            arrays.bounds[order] *= scale * (1.0 + 2.0**-40)
+        arrays.missing[:] |= ~((scale > 1 / SAFE_SCALE) & (scale < SAFE_SCALE))
+        more = {k: (factor.error + 2.0) * np.abs(v) for k, v in arrays.values.items()}
+        arrays.widen(np.arange(scale.size), more, tolerance)
+
+
+def _kinematics(plan: IntegralPlan, table: pa.Table, rows: int) -> _Kinematics:
+    columns = {name: rounded_column(table.column(name)) for name in plan.columns}
     p_squared, lines = plan.over(columns, rows)
+    error = np.zeros(rows)
     if p_squared is not None:
-        p = p_squared.value
-        usable &= p_squared.exact
+        error = np.maximum(error, p_squared.error)
     masses: list[Number] = []
     for re, im in lines:
-        usable &= re.exact
+        error = np.maximum(error, re.error)
         if im is None:
             masses.append(re.value)
             continue
-        usable &= im.exact
+        error = np.maximum(error, im.error)
         masses.append(re.value + 1j * im.value if im.value.any() else re.value)
-    return p, masses, usable
+    usable = np.isfinite(error)
+    mu_squared = None
+    if not plan.has_fixed_conventions:
+        mu_squared = plan.mu_squared_over(columns, rows)
+        value = mu_squared.value
+        usable &= np.isfinite(mu_squared.error) & (value > 1 / SAFE_SCALE) & (value < SAFE_SCALE)
+    for mass in masses:
+        usable &= ~invalid_mass(mass)
+    p = None if p_squared is None else p_squared.value
+    regions = _regions(p, masses, error)
+    usable &= regions != UNDECIDED
+    return _Kinematics(p, masses, mu_squared, error, regions, usable)
 
 
-def _regions(p: Real | None, masses: Sequence[Number]) -> NDArray[np.int8]:
+def _regions(p: Real | None, masses: Sequence[Number], error: Real) -> NDArray[np.int8]:
     """Return codes of `REGIONS`, `UNDECIDED` on and near every special point but p^2 = 0."""
     if p is None:
         return _one_point_regions(masses[0])
@@ -270,7 +333,9 @@ def _regions(p: Real | None, masses: Sequence[Number]) -> NDArray[np.int8]:
     for start in range(0, p.size, BLOCK):
         block = slice(start, start + BLOCK)
         with np.errstate(all="ignore"):
-            found[block] = _two_point_regions(p[block], masses[0][block], masses[1][block])
+            found[block] = _two_point_regions(
+                p[block], masses[0][block], masses[1][block], error[block]
+            )
     return found
 
 
@@ -282,7 +347,13 @@ def _one_point_regions(m: Number) -> NDArray[np.int8]:
     return found
 
 
-def _two_point_regions(p: Real, m1: Number, m2: Number) -> NDArray[np.int8]:
+def _two_point_regions(p: Real, m1: Number, m2: Number, error: Real) -> NDArray[np.int8]:
+    """Return codes of regions.
+
+    Relative errors delta of the arguments move lambda = S^2 - 4 m1^2 m2^2 by at most
+    delta (2 |S| M + 8 m1^2 m2^2) + delta^2 (M^2 + 4 m1^2 m2^2), M = |p^2| + m1^2 + m2^2: where
+    lambda > 0 withstands that, the sign of S does too.
+    """
     a, b = np.real(m1), np.real(m2)
     nil = np.zeros_like(p)
     point = real_points(p, a, b, nil, nil)
@@ -295,8 +366,13 @@ def _two_point_regions(p: Real, m1: Number, m2: Number) -> NDArray[np.int8]:
     ).astype(np.int8)
     massless = (a == 0) | (b == 0)
     found[massless & ~beyond] = CODE[Region.BELOW_THRESHOLD]
-    exact_or_close = (point.kallen_error == 0) | ~np.isfinite(point.kallen_error)
-    found[exact_or_close | np.isnan(point.kallen)] = UNDECIDED
+    delta, largest, product = error * UNIT, point.largest, a * b
+    moved = delta * (2.0 * np.abs(point.excess) * largest + 8.0 * product)
+    moved += 2.0 * (delta * largest) ** 2
+    certain = (point.kallen_error != 0) & np.isfinite(point.kallen_error)
+    certain &= (np.abs(point.kallen) > 2.0 * moved) & (largest < SAFE_SCALE)
+    certain &= largest > 1 / SAFE_SCALE
+    found[~certain] = UNDECIDED
     found[p < 0] = CODE[Region.SPACELIKE]
     if np.iscomplexobj(m1) or np.iscomplexobj(m2):
         found[(np.imag(m1) != 0) | (np.imag(m2) != 0)] = CODE[Region.COMPLEX_MASS]

@@ -8,11 +8,12 @@ from dataclasses import dataclass
 from functools import partial
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
 import pyarrow as pa
 
 from loopint.pipeline.chunks import OpenedRun, RowReader, evaluate_block, open_run
 from loopint.pipeline.cross_check import cross_check
-from loopint.pipeline.doubles import serves
+from loopint.pipeline.doubles import REGIONS, certain_regions, serves
 from loopint.pipeline.engines import run_tasks
 from loopint.pipeline.evaluate import RowEvaluator, RowRejectedError, row_requests
 from loopint.pipeline.run import worker_count
@@ -21,6 +22,9 @@ from loopint.pipeline.tables import write_integral
 if TYPE_CHECKING:
     from collections.abc import Callable
 
+    from numpy.typing import NDArray
+
+    from loopint.pipeline.chunks import Block
     from loopint.pipeline.config import RunConfig
     from loopint.pipeline.evaluate import Computed
     from loopint.pipeline.points import PointsSource
@@ -94,10 +98,11 @@ class _ChunkSurvey:
 
 
 class _ChunkSurveyor:
-    """Classifies the rows of a chunk."""
+    """Classifies the rows of a chunk, those of which doubles are sure as columns."""
 
     def __init__(self, config: RunConfig, source: PointsSource) -> None:
         self.opened = open_run(config, source)
+        self.in_columns = all(serves(plan, config.accuracy.digits) for plan in self.opened.plans)
         self.plans = self.opened.plans
         self.reader = RowReader(self.opened)
 
@@ -107,7 +112,8 @@ class _ChunkSurveyor:
         regions: dict[str, Counter[str]] = {plan.name: Counter() for plan in self.plans}
         rejected = 0
         rejections: list[Rejection] = []
-        for position, cells in enumerate(block.cells()):
+        positions = self._classify_columns(block, regions) if self.in_columns else np.arange(count)
+        for position, cells in zip(positions.tolist(), block.cells(positions), strict=True):
             try:
                 requests = row_requests(self.plans, cells)
             except RowRejectedError as error:
@@ -122,6 +128,17 @@ class _ChunkSurveyor:
                     snapped = "_snapped" if request.point.snapped else ""
                     regions[request.name][f"{request.point.region}{snapped}"] += 1
         return _ChunkSurvey(index, count, rejected, rejections, regions)
+
+    def _classify_columns(self, block: Block, regions: dict[str, Counter[str]]) -> NDArray[np.intp]:
+        """Count the rows whose regions are certain in doubles; return the others."""
+        count = len(block.keys)
+        found = [certain_regions(plan, block.table, count) for plan in self.plans]
+        certain = np.logical_and.reduce([usable for _, usable in found])
+        for plan, (codes, _) in zip(self.plans, found, strict=True):
+            for code, rows in enumerate(np.bincount(codes[certain], minlength=len(REGIONS))):
+                if rows:
+                    regions[plan.name][str(REGIONS[code])] += int(rows)
+        return np.flatnonzero(~certain)
 
 
 def survey_config(config: RunConfig, *, progress: Progress | None = None) -> Survey:

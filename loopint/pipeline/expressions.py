@@ -88,7 +88,7 @@ class Expression:
         return node.compute(values)
 
     def compute(self, columns: Mapping[str, Any]) -> Any:  # noqa: ANN401 - any arithmetic type
-        """Return the value for columns of a type with arithmetic, such as `ExactDoubles`.
+        """Return the value for columns of a type with arithmetic, such as `Rounded`.
 
         A constant expression is an `fmpq` whatever the columns.
         """

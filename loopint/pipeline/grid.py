@@ -20,8 +20,8 @@ from loopint.core.errors import InputError
 from loopint.core.precision import working_precision
 from loopint.pipeline.config import config_as_dict
 from loopint.pipeline.errors import ConfigError, unknown_name
-from loopint.pipeline.exact_doubles import nearest_double
 from loopint.pipeline.grid_config import MOST_ROWS
+from loopint.pipeline.rounded import nearest_double
 from loopint.pipeline.run_directory import replacing
 
 if TYPE_CHECKING:

@@ -19,14 +19,14 @@ from loopint.core.kinematics import (
 )
 from loopint.core.numbers import ZERO, ExactComplex, exact_real
 from loopint.pipeline.errors import ConfigError
-from loopint.pipeline.exact_doubles import ExactDoubles
+from loopint.pipeline.rounded import Rounded
 
 if TYPE_CHECKING:
     from loopint.integrals.registry import Integral
     from loopint.pipeline.config import MassKeys, RunConfig
     from loopint.pipeline.expressions import Expression
     from loopint.pipeline.points import PointsSource
-LineColumns: TypeAlias = tuple[ExactDoubles, ExactDoubles | None]  # Re and Im of m^2
+LineColumns: TypeAlias = tuple[Rounded, Rounded | None]  # Re and Im of m^2
 Values: TypeAlias = Mapping[str, fmpq]
 Cells: TypeAlias = Mapping[str, fmpq | InputError]
 
@@ -53,10 +53,10 @@ class _Quantity:
     def columns(self) -> frozenset[str]:
         return self.expression.columns
 
-    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> ExactDoubles:
+    def over(self, columns: Mapping[str, Rounded], rows: int) -> Rounded:
         """Evaluate in all rows at once."""
         found = self.expression.compute(columns)
-        return found if isinstance(found, ExactDoubles) else ExactDoubles.constant(found, rows)
+        return found if isinstance(found, Rounded) else Rounded.constant(found, rows)
 
     def real(self, values: Values) -> fmpq:
         try:
@@ -81,7 +81,7 @@ class _SquaredMass:
         if self.im and not self.im.columns:
             check_mass_squared(ExactComplex(ZERO, self.im.real({})), self.re.key)
 
-    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> LineColumns:
+    def over(self, columns: Mapping[str, Rounded], rows: int) -> LineColumns:
         return self.re.over(columns, rows), self.im.over(columns, rows) if self.im else None
 
     def value(self, values: Values) -> ExactComplex:
@@ -106,7 +106,7 @@ class _MassAndWidth:
             if quantity and not quantity.columns:
                 _not_negative(quantity, {})
 
-    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> LineColumns:
+    def over(self, columns: Mapping[str, Rounded], rows: int) -> LineColumns:
         mass = _where_not_negative(self.mass.over(columns, rows))
         if self.width is None:
             return mass * mass, None
@@ -125,9 +125,9 @@ class _FixedMass:
 
     squared: ExactComplex
 
-    def over(self, columns: Mapping[str, ExactDoubles], rows: int) -> LineColumns:  # noqa: ARG002
-        re = ExactDoubles.constant(self.squared.re, rows)
-        return re, None if self.squared.is_real else ExactDoubles.constant(self.squared.im, rows)
+    def over(self, columns: Mapping[str, Rounded], rows: int) -> LineColumns:  # noqa: ARG002
+        re = Rounded.constant(self.squared.re, rows)
+        return re, None if self.squared.is_real else Rounded.constant(self.squared.im, rows)
 
     def value(self, values: Values) -> ExactComplex:  # noqa: ARG002 - same call as the others
         return self.squared
@@ -176,11 +176,15 @@ class IntegralPlan:
         return bool(self._tolerance)
 
     def over(
-        self, columns: Mapping[str, ExactDoubles], rows: int
-    ) -> tuple[ExactDoubles | None, list[LineColumns]]:
+        self, columns: Mapping[str, Rounded], rows: int
+    ) -> tuple[Rounded | None, list[LineColumns]]:
         """Return p^2 (None for a tadpole) and the squared masses of all rows, unchecked."""
         p_squared = None if self._p_squared is None else self._p_squared.over(columns, rows)
         return p_squared, [line.over(columns, rows) for line in self._lines]
+
+    def mu_squared_over(self, columns: Mapping[str, Rounded], rows: int) -> Rounded:
+        """Return mu^2 of all rows, unchecked."""
+        return self._mu_squared.over(columns, rows)
 
     def point(self, cells: Cells) -> OnePoint | TwoPoint:
         """Return the exact kinematic point of a row.
@@ -287,9 +291,9 @@ def _line(quantities: Mapping[str, _Quantity], keys: MassKeys, where: str) -> Li
         raise ConfigError(f"{where} {error}") from None
 
 
-def _where_not_negative(column: ExactDoubles) -> ExactDoubles:
+def _where_not_negative(column: Rounded) -> Rounded:
     """Leave rows with a negative mass or width to the arithmetic that rejects them."""
-    return ExactDoubles(column.value, column.exact & (column.value >= 0))
+    return column.where(column.value >= 0)
 
 
 def _not_negative(quantity: _Quantity, values: Values) -> fmpq:

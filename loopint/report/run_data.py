@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from loopint.core.errors import LoopintError
 from loopint.pipeline.config import RunConfig
-from loopint.pipeline.exact_doubles import ExactDoubles
+from loopint.pipeline.rounded import Rounded
 from loopint.pipeline.tables import order_tag
 
 if TYPE_CHECKING:
@@ -335,7 +335,7 @@ def _sampled_points(data: RunData, config: RunConfig) -> pa.Table:
     return pa.concat_tables(pieces) if pieces else pa.table({name: [] for name in names})
 
 
-def _as_doubles(table: pa.Table, name: str) -> ExactDoubles:
+def _as_doubles(table: pa.Table, name: str) -> Rounded:
     column = table.column(name)
     if pa.types.is_dictionary(column.type):
         column = column.cast(column.type.value_type)
@@ -343,7 +343,7 @@ def _as_doubles(table: pa.Table, name: str) -> ExactDoubles:
         values = np.array([_number(text) for text in column.to_pylist()], dtype=np.float64)
     else:
         values = column.cast(pa.float64(), safe=False).to_numpy(zero_copy_only=False)
-    return ExactDoubles.of(np.asarray(values, dtype=np.float64))
+    return Rounded.of(np.asarray(values, dtype=np.float64))
 
 
 def _number(text: str | None) -> float:
@@ -377,6 +377,6 @@ def _marks(
 def _values(expression: Expression, table: pa.Table) -> Real:
     """Evaluate in floating point, for a plot."""
     found = expression.compute({name: _as_doubles(table, name) for name in expression.columns})
-    if not isinstance(found, ExactDoubles):
-        found = ExactDoubles.constant(found, table.num_rows)
+    if not isinstance(found, Rounded):
+        found = Rounded.constant(found, table.num_rows)
     return found.value
