@@ -617,7 +617,13 @@ def test_tolerance_decides_about_the_ball_path() -> None:
     points = samples("uniform", 60, 41)
     loose, tight = bubble_array(*points), bubble_array(*points, rel_tolerance=2.0**-52)
     assert not loose.fallback.any()
-    assert tight.fallback.all()
+    assert (tight.bounds[0] <= 2.0**-52 * np.maximum(1, np.abs(tight[0]))).all()
+    assert (tight.bounds[0] < loose.bounds[0]).all()
+    for value, bound, point in zip(
+        tight[0], tight.bounds[0], zip(*points, strict=True), strict=True
+    ):
+        true = loopint.bubble(*map(float, point), orders=(0, 0), digits=25)[0]
+        assert abs(complex(true - value)) <= bound
     for k in (-1, 0):
         assert (np.abs(loose[k] - tight[k]) <= loose.bounds[k] + tight.bounds[k]).all()
     strict = bubble_array(*points, relative_to="coefficient")
