@@ -76,7 +76,8 @@ def run(
         raise typer.Exit(INTERRUPTED) from None
     report_file = _try_report(outcome.directory)
     if as_json:
-        files = {"directory": str(outcome.directory), "report": str(report_file)}
+        page = None if report_file is None else str(report_file)
+        files = {"directory": str(outcome.directory), "report": page}
         typer.echo(json.dumps({**outcome.summary, **files}, indent=2))
     elif quiet:
         show_attention(outcome)
