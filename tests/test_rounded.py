@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import signal
+import subprocess
+import sys
+import time
 from decimal import Decimal
 from fractions import Fraction
 from pathlib import Path
@@ -183,7 +187,7 @@ formats = ["parquet", "csv"]
 layout = "{layout}"
 
 [cross_check]
-fraction = 0.01
+fraction = {fraction}
 
 [execution]
 workers = {workers}
@@ -205,10 +209,17 @@ def points(count: int) -> pa.Table:
 
 def run(folder: Path, digits: int, mu: str, layout: str = "long", workers: int = 1) -> Path:
     name = f"{layout}-{digits}-{workers}-{len(mu)}"
+    fraction = "0.01" if digits > 10 else '"none"'
     config = folder / f"{name}.toml"
     config.write_text(
         CONFIG.format(
-            folder=folder, name=name, digits=digits, mu=mu, layout=layout, workers=workers
+            folder=folder,
+            name=name,
+            digits=digits,
+            mu=mu,
+            layout=layout,
+            workers=workers,
+            fraction=fraction,
         )
     )
     run_config(load_config(config))
@@ -247,13 +258,37 @@ def test_a_survey_finds_the_regions_of_the_run(folder: Path) -> None:
     first = table.drop_duplicates(["row", "integral"])
     survey = survey_config(load_config(folder / "long-12-1-1.toml"))
     assert survey.rows_rejected == 2
-    assert [one.row for one in survey.rejections] == [5, 6] or len(survey.rejections) == 2
+    assert [one.row for one in survey.rejections] == [3, 5]
     for name, counts in survey.regions.items():
         assert counts == first[first["integral"] == name]["region"].value_counts().to_dict()
 
 
-@pytest.mark.parametrize("layout", ["long", "wide"])
-def test_bytes_do_not_depend_on_workers(folder: Path, layout: str) -> None:
-    first, second = (run(folder, 10, "e", layout, workers) for workers in (1, 2))
+def test_bytes_do_not_depend_on_workers(folder: Path) -> None:
+    first, second = (run(folder, 10, "e", "wide", workers) for workers in (1, 2))
     for name in ("table/part-00000.parquet", "table/part-00001.parquet", "table.csv"):
         assert (first / name).read_bytes() == (second / name).read_bytes()
+
+
+def test_a_run_killed_halfway_continues_to_the_same_bytes(tmp_path: Path) -> None:
+    pq.write_table(points(1500), tmp_path / "points.parquet")
+    whole = run(tmp_path, 9, "1")
+    second, out = tmp_path / "second.toml", tmp_path / "second"
+    text = (tmp_path / "long-9-1-1.toml").read_text()
+    second.write_text(text.replace(f"{whole}", f"{out}").replace("workers = 1", "workers = 2"))
+    command = [sys.executable, "-m", "loopint.cli", "run", str(second)]
+    process = subprocess.Popen(command, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
+    deadline = time.monotonic() + 60
+    while not list(out.glob(".work/chunk-*.json")):
+        assert process.poll() is None
+        assert time.monotonic() < deadline
+        time.sleep(0.002)
+    process.send_signal(signal.SIGKILL)
+    process.wait()
+    assert not (out / "summary.json").exists()
+    time.sleep(1)  # the workers notice that their parent is gone
+    outcome = run_config(load_config(second), workers=1)
+    assert 0 < outcome.summary["rows_resumed"] < 1500
+    names = sorted(path.name for path in (whole / "table").iterdir())
+    assert len(names) == 10
+    for name in (*(f"table/{name}" for name in names), "table.csv", "rejected.parquet"):
+        assert (out / name).read_bytes() == (whole / name).read_bytes()
