@@ -265,9 +265,9 @@ def formula(
     -------
     Formula
         `closed_form` and `coefficients` are sympy expressions; `as_text`, `as_latex`, `as_python`
-        and `as_sympy` print them with their domain, i0 prescription and sources.  A Gauss function
-        with epsilon in its parameters (a propagator with two scales) has a closed form in d
-        dimensions and no coefficients.
+        and `as_sympy` print them with their domain, i0 prescription and sources.  A propagator with
+        two scales has its coefficients in even dimensions only; in odd ones it has a closed form in
+        d dimensions and no coefficients.
 
     Raises
     ------

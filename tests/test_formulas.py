@@ -6,9 +6,6 @@ import random
 import re
 import subprocess
 import sys
-from dataclasses import dataclass
-from fractions import Fraction
-from itertools import pairwise
 
 import mpmath
 import pytest
@@ -17,13 +14,20 @@ import sympy
 import loopint
 from loopint.cli import main
 from loopint.formulas import special
-from loopint.formulas.formula import FORMS, Formula
+from loopint.formulas.formula import FORMS
 from loopint.formulas.functions import NielsenS, clausen2, log_sine
 from loopint.integrals.reduction import Kinematics
-from tests.reference import to_mp
+from tests.formula_checks import (
+    DIGITS,
+    check_closed_form,
+    check_formula,
+    counted,
+    deviation,
+    engine,
+    run_module,
+    samples,
+)
 
-DIGITS = 30
-EXTRA = 12  # guard digits of the evaluation, for cancellations in large reductions
 SPECIAL = [
     Kinematics.BOTH_MASSLESS,
     Kinematics.ZERO_MOMENTUM,
@@ -34,148 +38,11 @@ SPECIAL = [
     Kinematics.ON_SHELL,
 ]
 GENERIC = [Kinematics.GENERAL, Kinematics.EQUAL_MASS, Kinematics.ONE_MASSLESS]
-WORST: dict[str, object] = {"forms": 0, "values": 0, "deviation": mpmath.mpf(0)}
-
-
-@dataclass(frozen=True)
-class Sample:
-    """Values of the symbols of a formula, and the same point for the engine."""
-
-    values: dict[str, Fraction]
-    point: tuple[Fraction, ...]
-
-
-def between(rng: random.Random, low: Fraction, high: Fraction) -> Fraction:
-    """A rational number strictly between two others."""
-    return low + (high - low) * Fraction(rng.randint(1, 999), 1000)
-
-
-def samples(kinematics: str, rng: random.Random) -> list[Sample]:
-    """One point in every interval of p^2 that the formula distinguishes."""
-    m1, m2 = (between(rng, Fraction(1, 5), Fraction(3)) for _ in range(2))
-    m2 += m1 if abs(m1 - m2) < Fraction(1, 20) else 0
-    a, b, mu = m1**2, m2**2, between(rng, Fraction(1, 5), Fraction(4))
-    low, high = (m1 - m2) ** 2, (m1 + m2) ** 2
-
-    def of(point: tuple[Fraction, ...], **values: Fraction) -> Sample:
-        return Sample({**values, "mu_squared": mu}, point)
-
-    def momenta(*ends: Fraction) -> list[Fraction]:
-        inside = [between(rng, x, y) for x, y in pairwise(ends)]
-        return [-between(rng, Fraction(0), 5 * ends[-1]), *inside, ends[-1] * (1 + m1)]
-
-    zero = Fraction(0)
-    match kinematics:
-        case "general":
-            chosen = momenta(zero, low, high)
-            return [of((p, a, b), p_squared=p, m1_squared=a, m2_squared=b) for p in chosen]
-        case "equal_mass":
-            return [of((p, a, a), p_squared=p, m_squared=a) for p in momenta(zero, 4 * a)]
-        case "one_massless":
-            return [of((p, zero, a), p_squared=p, m_squared=a) for p in momenta(zero, a)]
-        case "both_massless":
-            return [of((p, zero, zero), p_squared=p) for p in (-a, b)]
-        case "zero_momentum":
-            return [of((zero, a, b), m1_squared=a, m2_squared=b)]
-        case "zero_momentum_equal_mass":
-            return [of((zero, a, a), m_squared=a)]
-        case "zero_momentum_one_massless":
-            return [of((zero, zero, a), m_squared=a)]
-        case "threshold":
-            return [of((high, a, b), m1_squared=a, m2_squared=b)]
-        case "pseudothreshold":
-            return [of((low, a, b), m1_squared=a, m2_squared=b)]
-        case "on_shell":
-            return [of((a, zero, a), m_squared=a)]
-        case "tadpole":
-            return [of((a,), m_squared=a)]
-    raise AssertionError(kinematics)
-
-
-def engine(formula: Formula, sample: Sample, orders: tuple[int, int]) -> loopint.LaurentSeries:
-    """Evaluate the integral of a formula with proven digits."""
-    keywords = {
-        "dimension": formula.dimension,
-        "orders": orders,
-        "digits": DIGITS + EXTRA,
-        "mu_squared": sample.values["mu_squared"],
-        "propagator_sign": str(formula.propagator_sign),
-        "measure": str(formula.measure),
-    }
-    if formula.family == "tadpole":
-        return loopint.tadpole(*sample.point, formula.powers[0], **keywords)
-    if formula.family == "propagator":
-        return loopint.propagator(*sample.point, formula.powers, **keywords)
-    return loopint.bubble(*sample.point, formula.powers, **keywords)
-
-
-def deviation(value: object, reference: mpmath.mpc) -> mpmath.mpf:
-    """The relative deviation; absolute where the reference is exactly zero."""
-    return abs(value - reference) / (abs(reference) or 1)
-
-
-def run_module(text: str) -> dict[str, object]:
-    """Run a printed module as it stands."""
-    namespace: dict[str, object] = {"__name__": "printed"}
-    exec(compile(text, "printed", "exec"), namespace)
-    return namespace
-
-
-def check_formula(formula: Formula, seed: str, *, lambdified: bool = True) -> None:
-    """Compare the printed Python module and the lambdified expressions with the engine."""
-    rng = random.Random(seed)
-    kinematics = "tadpole" if formula.family == "tadpole" else formula.kinematics
-    module = run_module(formula.as_python())
-    names = [str(s) for s in formula.symbols]
-    functions = {}
-    if lambdified:
-        functions = {
-            order: sympy.lambdify(formula.symbols, value, "mpmath")
-            for order, value in formula.coefficients.items()
-        }
-    WORST["forms"] += 1
-    for sample in samples(kinematics, rng):
-        with mpmath.workdps(DIGITS + EXTRA):
-            reference = engine(formula, sample, formula.orders)
-            arguments = [to_mp(sample.values[name]) for name in names]
-            for order, printed in module["COEFFICIENTS"].items():
-                values = [printed(*arguments)]
-                if functions:
-                    values.append(functions[order](*arguments))
-                for value in values:
-                    worst = deviation(value, reference[order])
-                    WORST["values"] += 1
-                    WORST["deviation"] = max(WORST["deviation"], worst)
-                    assert worst < mpmath.mpf(10) ** -DIGITS, (sample, order, value)
-
-
-def check_closed_form(formula: Formula, seed: str) -> None:
-    """Sum the engine's Laurent series at a small eps and compare with the closed form."""
-    rng = random.Random(seed)
-    kinematics = "tadpole" if formula.family == "tadpole" else formula.kinematics
-    closed = run_module(formula.as_python())["closed_form"]
-    arguments = (sympy.Symbol("eps"), *formula.symbols)
-    expression = sympy.lambdify(arguments, formula.closed_form, "mpmath")
-    names = [str(s) for s in formula.symbols]
-    for sample in samples(kinematics, rng):
-        with mpmath.workdps(DIGITS + EXTRA):
-            series = engine(formula, sample, (-3, 9))
-            eps = mpmath.mpf(10) ** -4
-            reference = mpmath.fsum(series[k] * eps**k for k in series)
-            arguments = [to_mp(sample.values[name]) for name in names]
-            for function in (closed, expression):
-                value = function(eps, *arguments)
-                # 10 orders at eps = 10^-4, times the growth of the coefficients
-                assert deviation(value, reference) < mpmath.mpf(10) ** -25, (sample, value)
 
 
 @pytest.fixture(scope="module", autouse=True)
-def _print_worst():
-    yield
-    print(
-        f"\n{WORST['forms']} printed forms, {WORST['values']} values, worst relative deviation "
-        f"{mpmath.nstr(WORST['deviation'], 2)}"
-    )
+def _count():
+    yield from counted()
 
 
 @pytest.mark.parametrize("dimension", [2, 3, 4, 5, 6])
@@ -245,70 +112,6 @@ def test_closed_forms(kinematics, dimension):
     check_closed_form(
         loopint.formula("bubble", kinematics=kinematics, dimension=dimension), f"closed {dimension}"
     )
-
-
-EPSILON_POWERS = [((1, 1), 1), ((1, "1/2"), (2, -2)), (2, (1, "-1/3")), ((1, 2), (1, 1))]
-ONE_SCALE = [
-    Kinematics.BOTH_MASSLESS,
-    Kinematics.ON_SHELL,
-    Kinematics.ZERO_MOMENTUM_EQUAL_MASS,
-    Kinematics.ZERO_MOMENTUM_ONE_MASSLESS,
-]
-
-
-@pytest.mark.parametrize("kinematics", ONE_SCALE)
-@pytest.mark.parametrize("powers", EPSILON_POWERS)
-@pytest.mark.parametrize("dimension", [3, 4, 6])
-def test_powers_that_depend_on_epsilon(kinematics, powers, dimension):
-    for sign, measure in (("minkowski", "msbar"), ("euclidean", "r_gamma")):
-        formula = loopint.formula(
-            "propagator",
-            powers,
-            kinematics=kinematics,
-            dimension=dimension,
-            orders=(-2, 3),
-            propagator_sign=sign,
-            measure=measure,
-        )
-        check_formula(formula, f"{kinematics} {powers} {dimension}")
-        check_closed_form(formula, f"closed {kinematics} {powers} {dimension}")
-
-
-@pytest.mark.parametrize("kinematics", [Kinematics.ONE_MASSLESS, Kinematics.ZERO_MOMENTUM])
-@pytest.mark.parametrize(
-    ("powers", "dimension"),
-    [
-        *((p, d) for p in EPSILON_POWERS for d in (3, 4)),
-        (((1, "1/2"), (2, -1)), 3),  # a - b does not depend on eps
-        (((1, "1/2"), (2, -1)), 6),
-    ],
-)
-def test_gauss_functions_of_powers_that_depend_on_epsilon(kinematics, powers, dimension):
-    formula = loopint.formula("propagator", powers, kinematics=kinematics, dimension=dimension)
-    assert formula.coefficients == {}
-    assert "loopint.propagator evaluates them" in formula.as_text()
-    check_closed_form(formula, f"gauss {kinematics} {powers} {dimension}")
-
-
-def test_propagators_with_integer_powers_are_bubbles():
-    assert loopint.formula("propagator", (2, (1, 0))) == loopint.formula("bubble", (2, 1))
-
-
-def test_lerch_form_of_a_power_that_depends_on_epsilon():
-    """2F1(1, b; b+1; z): powers 3/2 - eps - ... make N - d/2 = 1 with the massless power b."""
-    formula = loopint.formula(
-        "propagator", ((1, -1), (2, 0)), kinematics="one_massless", dimension=4
-    )
-    assert formula.closed_form.has(sympy.lerchphi)
-    check_closed_form(formula, "lerch")
-
-
-@pytest.mark.parametrize("kinematics", ["general", "equal_mass", "threshold", "pseudothreshold"])
-def test_propagators_without_closed_form_are_refused(kinematics):
-    with pytest.raises(loopint.UnsupportedIntegralError, match="no closed form"):
-        loopint.formula("propagator", ((1, 1), 1), kinematics=kinematics)
-    with pytest.raises(loopint.UnsupportedIntegralError, match="above threshold"):
-        loopint.formula("propagator", ((1, "-1/2"), (1, -1)), kinematics="one_massless")
 
 
 @pytest.mark.parametrize("kinematics", GENERIC)

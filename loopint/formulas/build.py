@@ -3,7 +3,8 @@
 ========================================  ==========================================================
 tadpole, both_massless, on_shell,         a product of Gamma functions and one power
 zero_momentum_equal_mass
-epsilon in the powers                     `loopint.formulas.propagators`
+epsilon in the powers                     `loopint.formulas.propagators`, with Laurent coefficients
+                                          of Gauss functions from `loopint.formulas.gauss_series`
 everything else                           `loopint.integrals.reduction` to tadpoles A(1) and, where
                                           the kinematics has it, the bubble B(1,1), in d = 2 - 2 eps
                                           or d = 3 - 2 eps; B(1,1) from `loopint.formulas.masters`
@@ -21,10 +22,10 @@ import sympy
 from flint import fmpq
 
 from loopint.core.conventions import Conventions, Measure, PropagatorSign
-from loopint.core.epsilon_linear import EpsilonLinear
+from loopint.core.epsilon_linear import EpsilonLinear, gamma_ratio
 from loopint.core.errors import InputError, UnsupportedIntegralError
 from loopint.core.gamma_factors import EpsilonFactor
-from loopint.formulas import masters, propagators
+from loopint.formulas import iterated, masters, propagators
 from loopint.formulas.expansion import (
     EPS,
     Expansion,
@@ -38,6 +39,8 @@ from loopint.formulas.expansion import (
     tidy,
 )
 from loopint.formulas.formula import Definition, Formula, Piece
+from loopint.formulas.functions import NielsenS
+from loopint.formulas.gauss_series import gauss_expansion
 from loopint.formulas.masters import KALLEN, L_CLOSED, MU2, P2, MasterPiece, l_symbol, symbol
 from loopint.formulas.texts import domain, prescription, sources
 from loopint.integrals.reduction import Kinematics, reduce_bubble
@@ -51,7 +54,8 @@ HIGHEST = 8
 FAMILIES = ("tadpole", "bubble", "propagator")
 M_SQUARED, M1_SQUARED, M2_SQUARED = map(symbol, ("m_squared", "m1_squared", "m2_squared"))
 M = symbol("m")
-L, L1, L2, L_MU = map(symbol, ("l", "l_1", "l_2", "l_mu"))
+L, L1, L2, L_MU, L_SCALE = map(symbol, ("l", "l_1", "l_2", "l_mu", "r"))
+Z, L_COMPLEMENT = symbol("z"), symbol("u")
 KALLEN_POLYNOMIAL = sympy.expand((P2 - M1_SQUARED - M2_SQUARED) ** 2 - 4 * M1_SQUARED * M2_SQUARED)
 
 
@@ -129,19 +133,21 @@ class _Request:
             for n in self.integral.powers
         )
 
-    def scale_rate(self, logarithm: Expr) -> Expr:
-        """Return r in exp(-eps r), what sign and scale contribute at a logarithm L of the scale.
+    def scale(self, logarithm: Expr) -> tuple[Expr, tuple[Definition, ...]]:
+        """Return r in exp(-eps r), what sign and scale contribute, and its definition.
 
-        The scale is (Q/mu^2)^(-eps) and, with powers n + a eps of sum N + A eps, Q^(-A eps)
-        exp(-i pi A eps) for minkowski propagators: mu^2 enters only as (mu^2)^eps.
+        The scale is (Q/mu^2)^(-eps), Q^(-eps) = exp(-eps logarithm), and, with powers n + a eps of
+        sum N + A eps, Q^(-A eps) exp(-i pi A eps) for minkowski propagators: mu^2 enters only as
+        (mu^2)^eps.
         """
         rate = rational(self.integral.epsilon_power)
         if rate == 0:
-            return logarithm
+            return L, ((L, logarithm),)
         phase = S.Zero
         if self.sign_convention is PropagatorSign.MINKOWSKI:
             phase = sympy.I * sympy.pi
-        return logarithm + rate * (logarithm + L_MU + phase)
+        total = sympy.expand(L + rate * (L + L_MU + phase))
+        return L_SCALE, ((L, logarithm), (L_MU, sympy.log(MU2)), (L_SCALE, total))
 
     @property
     def measure_factor(self) -> EpsilonFactor:
@@ -253,7 +259,7 @@ def _gamma_piece(
     s0 = rational(request.s0)
     power = base**s0 * sympy.exp(sympy.I * sympy.pi * phase * s0)
     logarithm = sympy.log(base / MU2) + sympy.I * sympy.pi * phase
-    rate = request.scale_rate(L)
+    rate, definitions = request.scale(logarithm)
     count = request.integral.orders[1] - factor.lowest_order + 1
     series = Expansion(request.integral.orders[1], (S.Zero,))
     if count > 0:
@@ -261,9 +267,9 @@ def _gamma_piece(
     lead, sign = root_pi(factor) * power / divisor, request.sign
     return Piece(
         conditions,
-        ((L, logarithm), (L_MU, sympy.log(MU2))),
+        definitions,
         weight * power * expression * sympy.exp(-EPS * rate),
-        request.coefficients(lambda order: lead * (sign * tidy(series[order], [L, L_MU], []))),
+        request.coefficients(lambda order: lead * (sign * tidy(series[order], [rate], []))),
     )
 
 
@@ -291,24 +297,78 @@ def _propagator(request: _Request) -> list[Piece]:
 def _gauss_pieces(
     request: _Request, powers: tuple[EpsilonLinear, ...], dimension: int
 ) -> list[Piece]:
-    """Return closed forms without Laurent coefficients."""
+    """Return the two-scale integrals: a Gauss function below and above z = 1."""
     form = propagators.gauss_form(request.kinematics, powers, dimension)
-    if any(x.is_pole_of_gamma for x in form.gammas.denominator):
+    ratio = gamma_ratio(form.gammas.numerator, form.gammas.denominator)
+    if ratio is None:
         return request.zero()
     one_massless = request.kinematics is Kinematics.ONE_MASSLESS
     scale = M_SQUARED if one_massless else M2_SQUARED
+    z = P2 / M_SQUARED if one_massless else (M2_SQUARED - M1_SQUARED) / M2_SQUARED
+    rate, definitions = request.scale(sympy.log(scale / MU2))
+    definitions = (*definitions, (Z, z))
     front = request.sign * request.measure_expression() * scale ** rational(request.s0)
-    front *= propagators.gamma_expression(form.gammas) * sympy.exp(-EPS * request.scale_rate(L))
-    definitions = ((L, sympy.log(scale / MU2)), (L_MU, sympy.log(MU2)))
-    z = P2 / M_SQUARED if one_massless else 1 - M1_SQUARED / M2_SQUARED
+    front *= propagators.gamma_expression(form.gammas) * sympy.exp(-EPS * rate)
+    coefficients, words = _gauss_coefficients(request, form, ratio, scale, z, rate)
+    complement = 1 - Z if one_massless else M1_SQUARED / M2_SQUARED
+    below = [(L_COMPLEMENT, sympy.log(complement))]
+    below += [(_nielsen_symbol(n, p), NielsenS(n, p, Z)) for n, p in words]
+    closed = front * propagators.gauss_function(form, Z)
     if not one_massless:
-        return [Piece((), definitions, front * propagators.gauss_function(form, z), {})]
-    below = front * propagators.gauss_function(form, z)
-    beyond = front * propagators.beyond_one(form, z)
-    return [
-        Piece((P2 < M_SQUARED,), definitions, below, {}),
-        Piece((P2 > M_SQUARED,), definitions, beyond, {}),
+        return [Piece((), (*definitions, *below), closed, coefficients)]
+    logarithms = sympy.log(Z), sympy.log(1 - 1 / Z)
+    above = [(L_COMPLEMENT, sympy.log(Z - 1) - sympy.I * sympy.pi)]
+    above += [
+        (_nielsen_symbol(n, p), iterated.beyond_one(n, p, *logarithms, 1 / Z)) for n, p in words
     ]
+    beyond = front * propagators.beyond_one(form, Z)
+    return [
+        Piece((sympy.Ne(P2, 0), P2 < M_SQUARED), (*definitions, *below), closed, coefficients),
+        Piece((P2 > M_SQUARED,), (*definitions, *above), beyond, coefficients),
+    ]
+
+
+def _gauss_coefficients(
+    request: _Request,
+    form: propagators.GaussForm,
+    ratio: EpsilonFactor,
+    scale: Expr,
+    z: Expr,
+    rate: Expr,
+) -> tuple[dict[int, Expr], list[tuple[int, int]]]:
+    """Return the coefficients, and n, p of the Nielsen polylogarithms in them."""
+    if request.integral.dimension % 2:
+        return {}, []
+    found: set[tuple[int, int]] = set()
+
+    def function(word: str) -> Expr:
+        if word == "1":
+            return -L_COMPLEMENT
+        n, p = word.count("0"), word.count("1")
+        found.add((n, p))
+        return _nielsen_symbol(n, p)
+
+    factor = request.measure_factor * ratio
+    highest = request.integral.orders[1]
+    count = highest - factor.lowest_order + 2  # 2F1 may begin at 1/eps
+    if count <= 0:
+        return request.coefficients(lambda _: S.Zero), []
+    gauss = gauss_expansion(form.a, form.b, form.c, count, z, function)
+    series = expand_factor(factor, count) * exponential(-rate, count) * gauss
+    if series.highest < highest:
+        raise UnsupportedIntegralError(
+            f"orders = {request.integral.orders}: beyond order {series.highest} the coefficients "
+            f"of these powers are not Nielsen polylogarithms; accepted: highest <= {series.highest}"
+        )
+    words = sorted(found, key=lambda index: (sum(index), index[1]))
+    generators = [rate, L_COMPLEMENT, *(_nielsen_symbol(n, p) for n, p in words)]
+    front = request.sign * scale ** rational(request.s0) * z**form.power
+    return request.coefficients(lambda k: tidy(front * series[k], generators, [])), words
+
+
+def _nielsen_symbol(n: int, p: int) -> Expr:
+    """Return the symbol of S_{n,p}(z), continued to z + i0."""
+    return symbol(f"s_{n}{p}")
 
 
 # Masters --------------------------------------------------------------------------------------

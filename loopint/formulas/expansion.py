@@ -2,13 +2,19 @@
 
 from __future__ import annotations
 
+import operator
 from dataclasses import dataclass
+from functools import reduce as fold
 from typing import TYPE_CHECKING, Any, TypeAlias
 
 import sympy
 
+from loopint.core.rational_functions import RationalFunction, variables
+
 if TYPE_CHECKING:
-    from flint import fmpq
+    from collections.abc import Iterator
+
+    from flint import fmpq, fmpz_mpoly
 
     from loopint.core.gamma_factors import EpsilonFactor
 
@@ -145,18 +151,92 @@ def tidy(expression: Expr, generators: list[Expr], roots: list[Expr]) -> Expr:
         *sorted((f for f in expression.atoms(sympy.log) if f.is_number), key=str),
     ]
     present = [g for g in generators if expression.has(g)] + constants
-    outside = [r for r in roots if expression.has(r)]
-    if not present + outside:
-        return sympy.factor(expression)
+    outside = [r for r in (*roots, sympy.I) if expression.has(r)]
+    split = _Splitter(expression, present, outside)
     groups: dict[Expr, Expr] = {}
-    for exponents, coefficient in sympy.Poly(expression, *present, *outside).terms():
-        inner, outer = exponents[: len(present)], exponents[len(present) :]
-        number, factors = oriented_factors(sympy.factor(coefficient))
-        function = sympy.Mul(*(b**e for b, e in factors.items()))
-        function = sympy.Mul(function, *(r**e for r, e in zip(outside, outer, strict=True)))
-        monomial = sympy.Mul(number, *(g**e for g, e in zip(present, inner, strict=True)))
-        groups[function] = groups.get(function, sympy.S.Zero) + monomial
+    for monomial, root, content, coefficient in split.terms():
+        sign, factors = oriented_factors(coefficient)
+        function = sympy.Mul(*(b**e for b, e in factors.items()), root)
+        groups[function] = groups.get(function, sympy.S.Zero) + content * sign * monomial
     return sympy.Add(*(_product(function, group) for function, group in groups.items()))
+
+
+class _Splitter:
+    """Split an expression into terms generators * roots * rational function, by FLINT.
+
+    The expression is one quotient of polynomials in everything that occurs; its denominator has
+    neither generators nor roots.
+    """
+
+    def __init__(self, expression: Expr, generators: list[Expr], roots: list[Expr]) -> None:
+        inside = [*generators, *roots]
+        free = sorted(expression.free_symbols - set(inside), key=str)
+        self._names = [*inside, *free]
+        self._inner, self._outer = len(generators), len(inside)
+        values = variables([f"x{k}" for k in range(len(self._names) + 1)])
+        self._one = values[-1] / values[-1]
+        self._known: dict[Expr, RationalFunction] = dict(zip(self._names, values[:-1], strict=True))
+        self._value = self._convert(expression)
+
+    def _convert(self, expression: Expr) -> RationalFunction:
+        found = self._known.get(expression)
+        if found is None:
+            found = self._known[expression] = self._computed(expression)
+        return found
+
+    def _computed(self, expression: Expr) -> RationalFunction:
+        if expression.is_Rational:
+            return self._one * int(expression.p) / int(expression.q)
+        if expression.is_Add:
+            return fold(operator.add, map(self._convert, expression.args))
+        if expression.is_Mul:
+            return fold(operator.mul, map(self._convert, expression.args))
+        base, exponent = expression.as_base_exp()
+        assert exponent.is_Integer, expression
+        power = fold(operator.mul, [self._convert(base)] * abs(int(exponent)))
+        return power if exponent > 0 else power.inverse()
+
+    def terms(self) -> Iterator[tuple[Expr, Expr, Expr, Expr]]:
+        """Yield monomial, root, number, and product of factors without a common number."""
+        top, bottom = self._value.numerator, self._value.denominator
+        context = top.context()
+        parts: dict[tuple[int, ...], dict[tuple[int, ...], Any]] = {}
+        for exponents, number in top.to_dict().items():
+            key = list(exponents[: self._outer])
+            sign = 1
+            if sympy.I in self._names:  # i^2 = -1
+                k = self._names.index(sympy.I)
+                sign = (-1) ** (key[k] // 2)
+                key[k] %= 2
+            rest = (0,) * self._outer + tuple(exponents[self._outer :])
+            part = parts.setdefault(tuple(key), {})
+            part[rest] = part.get(rest, 0) + sign * number
+        for powers, part in parts.items():
+            polynomial = context.from_dict(part)
+            if polynomial.is_zero():
+                continue
+            common = polynomial.gcd(bottom)
+            inner = zip(self._names[: self._inner], powers[: self._inner], strict=True)
+            outer = zip(self._names[self._inner : self._outer], powers[self._inner :], strict=True)
+            above, top_product = self._factorised(polynomial / common)
+            below, bottom_product = self._factorised(bottom / common)
+            yield (
+                sympy.Mul(*(g**e for g, e in inner)),
+                sympy.Mul(*(r**e for r, e in outer)),
+                sympy.Rational(above, below),
+                top_product / bottom_product,
+            )
+
+    def _factorised(self, polynomial: fmpz_mpoly) -> tuple[int, Expr]:
+        content, factors = polynomial.factor()
+        product = sympy.S.One
+        for factor, power in factors:
+            terms = []
+            for exponents, number in factor.to_dict().items():
+                powers = zip(self._names, exponents[:-1], strict=True)
+                terms.append(int(number) * sympy.Mul(*(x**e for x, e in powers)))
+            product *= sympy.Add(*terms) ** int(power)
+        return int(content), product
 
 
 def _product(function: Expr, group: Expr) -> Expr:

@@ -19,6 +19,7 @@ TEXT_NAMES = {
     "l_2": "l2",
     "l_mu": "log(mu^2)",
     **{f"L_{k}": f"L{k}" for k in range(1, 60)},
+    **{f"s_{n}{p}": f"s{n}{p}" for n in range(1, 12) for p in range(1, 12)},
 }
 LATEX_NAMES = {
     "eps": r"\varepsilon",

@@ -1,8 +1,9 @@
 """Closed forms of two-point integrals whose powers depend on epsilon.
 
 The d-dimensional forms are those of `loopint.integrals.propagator`.  One product of Gamma functions
-has Laurent coefficients in logarithms and zeta values; a Gauss function whose parameters depend on
-epsilon is given in d dimensions only.
+has Laurent coefficients in logarithms and zeta values.  A Gauss function whose parameters depend on
+epsilon has coefficients in Nielsen polylogarithms in even d0 (`loopint.formulas.gauss_series`); in
+odd d0 it is given in d dimensions only.
 """
 
 from __future__ import annotations
@@ -42,12 +43,13 @@ class GammaProduct:
 
 @dataclass(frozen=True)
 class GaussForm:
-    """gammas * 2F1(a, b; c; z)."""
+    """gammas * z^power * 2F1(a, b; c; z)."""
 
     gammas: GammaProduct
     a: EpsilonLinear
     b: EpsilonLinear
     c: EpsilonLinear
+    power: int = 0
 
 
 def check_kinematics(kinematics: Kinematics) -> None:
@@ -55,7 +57,8 @@ def check_kinematics(kinematics: Kinematics) -> None:
     if kinematics not in COVERED:
         raise UnsupportedIntegralError(
             f'a propagator with epsilon in its powers has no closed form for kinematics "'
-            f'{kinematics}"; accepted: {", ".join(COVERED)}; loopint.propagator evaluates all'
+            f'{kinematics}"; accepted: {", ".join(COVERED)}; loopint.propagator evaluates the '
+            "integral, by quadrature where both n >= 1"
         )
 
 
@@ -100,7 +103,12 @@ def gauss_form(
     if kinematics is Kinematics.ONE_MASSLESS:
         gammas = GammaProduct((half - first, excess), (half, second))
         return GaussForm(gammas, excess, first, half)
-    return GaussForm(GammaProduct((excess,), (total,)), excess, first, total)
+    if not total.is_pole_of_gamma:
+        return GaussForm(GammaProduct((excess,), (total,)), excess, first, total)
+    # 2F1(a, b; c; z)/Gamma(c) at c = -n, DLMF 15.2.3_5
+    power = 1 - int(total.constant.p)
+    a, b, c = excess + power, first + power, total + 2 * power
+    return GaussForm(GammaProduct((a, b), (first, c)), a, b, c, power)
 
 
 def linear(value: EpsilonLinear) -> Expr:
@@ -109,11 +117,11 @@ def linear(value: EpsilonLinear) -> Expr:
 
 
 def gauss_function(form: GaussForm, z: Expr) -> Expr:
-    """Write 2F1, or Lerch's function where 2F1(1, b; b+1; z) = b Phi(z, 1, b)."""
+    """Write z^power 2F1, or Lerch's function where 2F1(1, b; b+1; z) = b Phi(z, 1, b)."""
     for one, other in ((form.a, form.b), (form.b, form.a)):
         if one == ONE and form.c == other + 1:
-            return linear(other) * sympy.lerchphi(z, 1, linear(other))
-    return _gauss(form.a, form.b, form.c, z)
+            return z**form.power * linear(other) * sympy.lerchphi(z, 1, linear(other))
+    return z**form.power * _gauss(form.a, form.b, form.c, z)
 
 
 def _gauss(a: EpsilonLinear, b: EpsilonLinear, c: EpsilonLinear, z: Expr) -> Expr:

@@ -29,6 +29,10 @@ REDUCTION = (
 )
 LERCH = "2F1(1,b;b+1;z) = b Phi(z,1,b), Lerch's function: DLMF 15.2.1, 25.14.1"
 BEYOND = "above threshold, by functions of 1/z or 1-1/z: DLMF 15.8.2, 15.8.5"
+SERIES = (
+    "eps-series of 2F1 by contiguous relations and its differential equation: DLMF 15.5.11-15.5.18,"
+    " 15.10.1; iterated integrals: Remiddi, Vermaseren, hep-ph/9905237"
+)
 GAUSS = "the value on shell by Gauss's sum: DLMF 15.4.20"
 
 REAL = "nothing to choose: Q > 0 between the ends of the Feynman parameter"
@@ -98,9 +102,10 @@ def sources(
     def uses(*functions: object) -> bool:
         return any(value.has(*functions) for value in values)
 
-    special = uses(sympy.hyper)
-    gamma_only = {"tadpole", "both_massless", "zero_momentum_equal_mass"}
     linear = any(isinstance(n, EpsilonLinear) for n in powers)
+    special = uses(sympy.hyper)
+    two_scales = linear and name in {"one_massless", "zero_momentum"}
+    gamma_only = {"tadpole", "both_massless", "zero_momentum_equal_mass"}
     one_mass = linear and name in {"one_massless", "zero_momentum_one_massless"}
     found = {
         REDUCTION: name not in {*gamma_only, "on_shell"} and not linear,
@@ -112,6 +117,7 @@ def sources(
         LOG_SINE: uses(clausen2, log_sine),
         LERCH: uses(sympy.lerchphi),
         FINITE_PART: special and (powers, dimension) == ((1, 1), 4),
+        SERIES: two_scales and any(piece.coefficients for piece in pieces),
         BEYOND: linear and special and len(pieces) > 1,
         GAMMA: any(piece.coefficients for piece in pieces),
     }
