@@ -22,6 +22,7 @@ from loopint.arrays.result import invalid_mass
 from loopint.arrays.rounding import UNIT
 from loopint.arrays.tadpole import tadpole_doubles
 from loopint.core.kinematics import Region
+from loopint.core.lazy import lazy
 from loopint.pipeline.cells import rounded_column
 from loopint.pipeline.rounded import Rounded
 from loopint.pipeline.tables import IntegralColumns, Written, WrittenIntegral
@@ -88,8 +89,12 @@ class DoubleResults:
     regions: NDArray[np.int8]
     real: Mask
 
-    def digits(self, order: int) -> tuple[NDArray[np.int16], Mask]:
-        """Return proven digits as in `tables.proven_digits`, and where the value is exact."""
+    @lazy
+    def digits(self) -> dict[int, tuple[NDArray[np.int16], Mask]]:
+        """By order: proven digits as in `tables.proven_digits`, and where the value is exact."""
+        return {order: self._digits(order) for order in self.values}
+
+    def _digits(self, order: int) -> tuple[NDArray[np.int16], Mask]:
         bound, size = self.bounds[order], np.abs(self.values[order])
         with np.errstate(all="ignore"):
             found = np.floor(-np.log10(MARGIN * bound / size) - 1e-9)
@@ -103,7 +108,7 @@ class DoubleResults:
         numbers = []
         for order in range(self.orders[0], self.orders[1] + 1):
             value, bound = self.values[order][row], float(self.bounds[order][row])
-            digits, exact = self.digits(order)
+            digits, exact = self.digits[order]
             numbers.append(
                 Written(
                     float(value.real),
@@ -129,7 +134,7 @@ class DoubleResults:
         rest = [others[int(place)] for place in places]
         for index, order in enumerate(columns.orders):
             value, bound = self.values[order], self.bounds[order]
-            digits, exact = self.digits(order)
+            digits, exact = (column.copy() for column in self.digits[order])
             found: dict[str, NDArray[Any]] = {
                 "re": value.real.copy(),
                 "im": value.imag.copy(),
