@@ -144,6 +144,17 @@ def test_outside_the_range(tmp_path):
     assert np.isnan(values).tolist() == [False, True, True]
 
 
+def test_the_ends_are_the_numbers_that_were_written(tmp_path):
+    for text in ("0.1", "0.7", "1/3", "2.3", "-0.3"):
+        end = float(Fraction(text))
+        made = build(tmp_path, range=f'["{text}", 60]').interpolant
+        assert made.range[0] == end
+        made(0, end)
+        made = build(tmp_path, range=f'[-20, "{text}"]').interpolant
+        assert made.range[1] == end
+        made(0, end)
+
+
 def test_damaged_files_are_refused(tmp_path):
     build(tmp_path)
     path = tmp_path / "made.json"
@@ -163,6 +174,7 @@ def test_damaged_files_are_refused(tmp_path):
 
 UNUSABLE = [
     ({"range": "[3, 1]"}, "two increasing numbers"),
+    ({"range": '[0, "1e400"]'}, "range holds a number beyond the range of float64"),
     ({"a": "0"}, "positive masses"),
     ({"more": "error = 1e-18"}, "is not reached"),
     ({"more": "ordres = [0]"}, "did you mean orders?"),

@@ -27,6 +27,7 @@ from loopint.interpolation.analyticity import (
 from loopint.interpolation.export import write_exports
 from loopint.interpolation.interpolant import Interpolant, save_interpolant
 from loopint.pipeline.errors import ConfigError, unknown_name
+from loopint.pipeline.rounded import finite_double
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -144,6 +145,12 @@ class _Job:
         )
         return cls(entry, conventions, low, high, masses[0], masses[1], where)
 
+    @property
+    def ends(self) -> tuple[float, float]:
+        """The ends of the range as doubles: a float that a user wrote is itself."""
+        where = f"{self.where} range"
+        return finite_double(self.low, where), finite_double(self.high, where)
+
     def build(self) -> tuple[Interpolant, int]:
         """Return the interpolant and the largest degree."""
         mu = self.conventions.mu_squared
@@ -198,7 +205,7 @@ class _Job:
             low = float((threshold - arb(high)).mid())
         powers = "bubble(1, 1), d = 4 - 2 eps"
         edges = [piece.left for piece in pieces] + [pieces[-1].right]
-        edges[0], edges[-1] = _double(self.low), _double(self.high)
+        edges[0], edges[-1] = self.ends
         return Interpolant(
             self.entry.name,
             f"{powers}, m1_squared = {self.m1}, m2_squared = {self.m2}",
@@ -220,7 +227,7 @@ class _Job:
     def _pieces(self, threshold: arb, sheets: Sheets, unit: float) -> list[Piece]:
         """Cut the range so that an acceptable degree reaches the error on every piece."""
         t = float(threshold.mid())
-        low, high = _double(self.low), _double(self.high)
+        low, high = self.ends
         pieces: list[Piece] = []
         if low < t:
             start = math.sqrt(t - high) if high < t else 0.0
@@ -384,7 +391,3 @@ def _constant(expression: Expression, known: Mapping[str, fmpq], key: str) -> fm
                 f"{key} = {expression.text}: {name} has no value; accepted: it in constants"
             )
     return expression.evaluate(known)
-
-
-def _double(value: fmpq) -> float:
-    return float_with_bound(arb(value))[0]

@@ -21,7 +21,7 @@ from loopint.core.precision import working_precision
 from loopint.pipeline.config import config_as_dict
 from loopint.pipeline.errors import ConfigError, unknown_name
 from loopint.pipeline.grid_config import MOST_ROWS
-from loopint.pipeline.rounded import nearest_double
+from loopint.pipeline.rounded import finite_double
 from loopint.pipeline.run_directory import replacing
 
 if TYPE_CHECKING:
@@ -199,14 +199,14 @@ def _axis(
             return _random(config, low, high, random, where)
         case "chebyshev":
             angle = (2 * np.arange(count)[::-1] + 1) * np.pi / (2 * count)
-            a, b = _double(low, where), _double(high, where)
+            a, b = finite_double(low, where), finite_double(high, where)
             return Axis(config.name, None, (a + b) / 2 + (b - a) / 2 * np.cos(angle), False)
     a, b = _logarithms(low, high, where)
     return Axis(config.name, None, np.exp(np.linspace(a, b, count)), False)
 
 
 def _exact(config: AxisConfig, values: list[fmpq], where: str) -> Axis:
-    doubles = np.array([_double(value, where) for value in values])
+    doubles = np.array([finite_double(value, where) for value in values])
     return Axis(config.name, values, doubles, config.type == "string")
 
 
@@ -215,7 +215,7 @@ def _random(
 ) -> Axis:
     count = config.count or 1
     if config.scale == "linear":
-        values = random.uniform(_double(low, where), _double(high, where), count)
+        values = random.uniform(finite_double(low, where), finite_double(high, where), count)
     else:
         values = np.exp(random.uniform(*_logarithms(low, high, where), count))
     return Axis(config.name, None, values, False)
@@ -262,14 +262,7 @@ def _clustered(
 def _logarithms(low: fmpq, high: fmpq, where: str) -> tuple[float, float]:
     if low <= 0:
         raise ConfigError(f"{where} from = {low} has no logarithm; accepted: a positive number")
-    return math.log(_double(low, where)), math.log(_double(high, where))
-
-
-def _double(value: fmpq, where: str) -> float:
-    found = nearest_double(value)
-    if found is None:
-        raise ConfigError(f"{where} holds a number beyond the range of float64")
-    return found
+    return math.log(finite_double(low, where)), math.log(finite_double(high, where))
 
 
 def _constants(given: Mapping[str, Expression], where: str) -> dict[str, fmpq]:

@@ -14,6 +14,7 @@ from flint import fmpq
 from numpy.typing import NDArray
 
 from loopint.arrays.rounding import UNIT, Real, two_product, two_sum
+from loopint.pipeline.errors import ConfigError
 
 LARGEST, SMALLEST = 2.0**900, 2.0**-900
 GROWTH = 1.0 + 2.0**-48  # the rounding of the errors themselves
@@ -160,6 +161,20 @@ def nearest_double(number: fmpq) -> float | None:
         return int(number.p) / int(number.q)
     except OverflowError:
         return None
+
+
+def finite_double(number: fmpq, where: str) -> float:
+    """Return the float64 nearest to a number that `where` of a config gives.
+
+    Raises
+    ------
+    ConfigError
+        If it is beyond the range of float64.
+    """
+    found = nearest_double(number)
+    if found is None:
+        raise ConfigError(f"{where} holds a number beyond the range of float64")
+    return found
 
 
 def _in_range(x: Real) -> NDArray[np.bool_]:
