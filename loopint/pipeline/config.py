@@ -402,10 +402,9 @@ class AnyConfig(Section):
         return beside if not path.exists() and beside.exists() else path
 
 
-class RunConfig(AnyConfig):
-    """A config for `loopint run`; the columns it names are checked against the points."""
+class EvaluatingConfig(AnyConfig):
+    """A config for a command that evaluates integrals and writes a directory."""
 
-    points: PointsConfig = Field(description="a section [points]")
     integrals: tuple[IntegralConfig, ...] = Field(
         alias="integral",
         strict=False,
@@ -413,6 +412,12 @@ class RunConfig(AnyConfig):
         description="one or more sections [[integral]]",
     )
     output: OutputConfig = Field(description="a section [output]")
+
+
+class RunConfig(EvaluatingConfig):
+    """A config for `loopint run`; the columns it names are checked against the points."""
+
+    points: PointsConfig = Field(description="a section [points]")
 
 
 class GridRunConfig(AnyConfig):
@@ -422,22 +427,15 @@ class GridRunConfig(AnyConfig):
     grid: GridConfig = Field(description="a section [grid]")
 
 
-class InterpolationRunConfig(AnyConfig):
+class InterpolationRunConfig(EvaluatingConfig):
     """A config for `loopint interpolate`, whose columns are the variables of the interpolants."""
 
-    integrals: tuple[IntegralConfig, ...] = Field(
-        alias="integral",
-        strict=False,
-        min_length=1,
-        description="one or more sections [[integral]]",
-    )
     interpolations: tuple[InterpolationConfig, ...] = Field(
         alias="interpolation",
         strict=False,
         min_length=1,
         description="one or more sections [[interpolation]]",
     )
-    output: OutputConfig = Field(description="a section [output]")
 
 
 AnyKind = TypeVar("AnyKind", bound=AnyConfig)
