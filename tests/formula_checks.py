@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import random
+import subprocess
+import sys
 from collections.abc import Iterator
 from dataclasses import dataclass
 from fractions import Fraction
@@ -174,3 +176,24 @@ def check_closed_form(formula: Formula, seed: str) -> None:
                 value = function(eps, *arguments)
                 # 10 orders at eps = 10^-4, times the growth of the coefficients
                 assert deviation(value, reference) < mpmath.mpf(10) ** -25, (sample, value)
+
+
+def check_printed_program(text: str, formula: Formula, sample: Sample) -> None:
+    """Run a printed Python module in a process of its own and compare its eps^2 coefficient."""
+    listed = ", ".join(
+        f"mpmath.mpf({value.numerator})/{value.denominator}"
+        for value in (sample.values[str(s)] for s in formula.symbols)
+    )
+    program = text + (
+        f"\nmpmath.mp.dps = 40\nvalue = mpmath.mpmathify(COEFFICIENTS[2]({listed}))\n"
+        "print(mpmath.nstr(value.real, 36), mpmath.nstr(value.imag, 36))\n"
+    )
+    run = subprocess.run(
+        [sys.executable, "-I", "-W", "error", "-c", program],
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    with mpmath.workdps(40):
+        value = mpmath.mpc(*run.stdout.split())
+        assert deviation(value, engine(formula, sample, (2, 2))[2]) < mpmath.mpf(10) ** -DIGITS

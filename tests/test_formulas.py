@@ -18,12 +18,10 @@ from loopint.formulas.formula import FORMS
 from loopint.formulas.functions import NielsenS, clausen2, log_sine
 from loopint.integrals.reduction import Kinematics
 from tests.formula_checks import (
-    DIGITS,
     check_closed_form,
     check_formula,
+    check_printed_program,
     counted,
-    deviation,
-    engine,
     run_module,
     samples,
 )
@@ -127,23 +125,7 @@ def test_higher_orders(kinematics, dimension):
 def test_python_output_runs_as_printed(kinematics, dimension):
     formula = loopint.formula("bubble", kinematics=kinematics, dimension=dimension)
     sample = samples(kinematics, random.Random(kinematics))[-1]
-    arguments = ", ".join(
-        f"mpmath.mpf({value.numerator})/{value.denominator}"
-        for value in (sample.values[str(s)] for s in formula.symbols)
-    )
-    program = formula.as_python() + (
-        f"\nmpmath.mp.dps = 40\nvalue = mpmath.mpmathify(COEFFICIENTS[2]({arguments}))\n"
-        "print(mpmath.nstr(value.real, 36), mpmath.nstr(value.imag, 36))\n"
-    )
-    run = subprocess.run(
-        [sys.executable, "-I", "-W", "error", "-c", program],
-        capture_output=True,
-        text=True,
-        check=True,
-    )
-    with mpmath.workdps(40):
-        value = mpmath.mpc(*run.stdout.split())
-        assert deviation(value, engine(formula, sample, (2, 2))[2]) < mpmath.mpf(10) ** -DIGITS
+    check_printed_program(formula.as_python(), formula, sample)
 
 
 @pytest.mark.parametrize("kinematics", [*GENERIC, *SPECIAL])

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import random
-import subprocess
 import sys
 from fractions import Fraction
 from itertools import product
@@ -21,12 +20,11 @@ from loopint.formulas.functions import NielsenS
 from loopint.formulas.gauss_series import gauss_expansion
 from loopint.integrals.reduction import Kinematics
 from tests.formula_checks import (
-    DIGITS,
     check_closed_form,
     check_formula,
+    check_printed_program,
     counted,
     deviation,
-    engine,
     run_module,
     samples,
 )
@@ -235,23 +233,7 @@ def test_command_prints_coefficients_that_run(monkeypatch, capsys):
     assert not caught.value.code
     formula = loopint.formula("propagator", ((1, 1), 1), kinematics="one_massless")
     sample = samples("one_massless", random.Random(5))[-1]
-    listed = ", ".join(
-        f"mpmath.mpf({value.numerator})/{value.denominator}"
-        for value in (sample.values[str(s)] for s in formula.symbols)
-    )
-    program = capsys.readouterr().out + (
-        f"\nmpmath.mp.dps = 40\nvalue = COEFFICIENTS[2]({listed})\n"
-        "print(mpmath.nstr(value.real, 36), mpmath.nstr(value.imag, 36))\n"
-    )
-    run = subprocess.run(
-        [sys.executable, "-I", "-W", "error", "-c", program],
-        capture_output=True,
-        text=True,
-        check=True,
-    )
-    with mpmath.workdps(40):
-        value = mpmath.mpc(*run.stdout.split())
-        assert deviation(value, engine(formula, sample, (2, 2))[2]) < mpmath.mpf(10) ** -DIGITS
+    check_printed_program(capsys.readouterr().out, formula, sample)
 
 
 # The mathematics below the formulas ---------------------------------------------------------------

@@ -38,6 +38,7 @@ class NielsenS(sympy.Function):  # type: ignore[misc] # sympy has no types
 
     nargs = 3
 
+    # sympy's hook: it gets expressions that the formulas build, never text of a user
     @classmethod
     def eval(cls, n: Any, p: Any, z: Any) -> Any:  # noqa: ANN401
         """Reduce p = 1 to polylogarithms, and the values at 0 and (n = 1) at 1."""
@@ -86,6 +87,7 @@ class log_sine(sympy.Function):  # type: ignore[misc] # noqa: N801 - sympy names
 
     nargs = 2
 
+    # sympy's hook: it gets expressions that the formulas build, never text of a user
     @classmethod
     def eval(cls, j: Any, theta: Any) -> Any:  # noqa: ANN401
         """Reduce j = 1 and j = 2."""
@@ -123,6 +125,7 @@ class clausen2(sympy.Function):  # type: ignore[misc] # noqa: N801
 
     nargs = 1
 
+    # sympy's hook: it gets expressions that the formulas build, never text of a user
     @classmethod
     def eval(cls, theta: Any) -> Any:  # noqa: ANN401
         """Reduce the multiples of pi and pi/2."""
