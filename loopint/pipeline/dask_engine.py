@@ -27,6 +27,7 @@ if TYPE_CHECKING:
 Task = TypeVar("Task")
 Result = TypeVar("Result")
 
+KEPT_BYTES = 2**28  # free memory that a worker of our own keeps
 CONNECT_SECONDS = 20  # to reach a scheduler, and for its first worker to appear
 TASKS_PER_WORKER = 2  # one under way and one waiting: what is outstanding stays small
 CONTINUES = "the finished chunks are kept and the same command continues from them"
@@ -119,16 +120,21 @@ def _client(workers: int, scheduler: str | None) -> Iterator[Any]:
 
 
 def _local_cluster(workers: int) -> Any:  # noqa: ANN401 - Dask is optional and has no types
+    import dask.config  # noqa: PLC0415
     from distributed import LocalCluster  # noqa: PLC0415
 
-    return LocalCluster(
-        n_workers=workers,
-        threads_per_worker=1,
-        processes=True,
-        memory_limit=None,  # like the local engine: nothing waits, nothing is spilled
-        dashboard_address="127.0.0.1:0",  # any free port: runs must not be in each other's way
-        silence_logs=logging.CRITICAL,
-    )
+    # Dask's workers give memory back to the system at once, which costs a third of the time
+    place = "distributed.nanny.pre-spawn-environ"
+    kept = {f"{place}.MALLOC_{what}_THRESHOLD_": KEPT_BYTES for what in ("TRIM", "MMAP")}
+    with dask.config.set(kept):
+        return LocalCluster(
+            n_workers=workers,
+            threads_per_worker=1,
+            processes=True,
+            memory_limit=None,  # like the local engine: nothing waits, nothing is spilled
+            dashboard_address="127.0.0.1:0",  # any free port: runs must not be in each other's way
+            silence_logs=logging.CRITICAL,
+        )
 
 
 def _check_workers(client: Any) -> None:  # noqa: ANN401
