@@ -43,11 +43,8 @@ def kallen(x: ExactComplex, y: ExactComplex, z: ExactComplex) -> ExactComplex:
     >>> kallen(c(4), c(1), c(1))
     ExactComplex(re=0, im=0)
     """
-    if not (x.im or y.im or z.im):  # the common case, twice as fast
-        real = x.re - y.re - z.re
-        return ExactComplex(real * real - FOUR * y.re * z.re)
     difference = x - y - z
-    return difference * difference - (y * z).scaled(fmpq(4))
+    return difference * difference - (y * z).scaled(FOUR)
 
 
 def check_mass_squared(value: ExactComplex, name: str) -> ExactComplex:
@@ -122,38 +119,43 @@ class TwoPoint:
     @lazy
     def masses_are_real(self) -> bool:
         """Whether both squared masses are real."""
-        return self.m1_squared.is_real and self.m2_squared.is_real
+        return not (self.m1_squared.im or self.m2_squared.im)
 
     @lazy
     def kallen(self) -> ExactComplex:
         """lambda(p^2, m1^2, m2^2), exactly; zero for a snapped point."""
         if self.snapped:
             return ExactComplex(ZERO)
-        return kallen(ExactComplex(self.p_squared), self.m1_squared, self.m2_squared)
+        if not self.masses_are_real:
+            return kallen(ExactComplex(self.p_squared), self.m1_squared, self.m2_squared)
+        m1, m2 = self.m1_squared.re, self.m2_squared.re
+        rest = self.p_squared - m1 - m2
+        return ExactComplex(rest * rest - FOUR * m1 * m2)
 
     @lazy
     def region(self) -> Region:
         """The region of the point, decided exactly."""
         if self.snapped_onto is not None:
             return self.snapped_onto
-        m1, m2, p = self.m1_squared, self.m2_squared, self.p_squared
+        p = self.p_squared
         if not p:
-            massless = m1.is_zero and m2.is_zero
+            massless = self.m1_squared.is_zero and self.m2_squared.is_zero
             return Region.SCALELESS if massless else Region.ZERO_MOMENTUM
         if not self.masses_are_real:
             return Region.COMPLEX_MASS
         if p < ZERO:
             return Region.SPACELIKE
-        beyond = p - m1.re - m2.re  # zero of lambda: +- 2 m1 m2
+        m1, m2 = self.m1_squared.re, self.m2_squared.re
         size = self.kallen.re
-        if m1.is_zero or m2.is_zero:
+        if size < ZERO:
+            return Region.BELOW_THRESHOLD
+        beyond = p - m1 - m2  # zero of lambda: +- 2 m1 m2
+        if not (m1 and m2):
             if not size:
                 return Region.ON_SHELL
             return Region.ABOVE_THRESHOLD if beyond > ZERO else Region.BELOW_THRESHOLD
         if not size:
             return Region.THRESHOLD if beyond > ZERO else Region.PSEUDOTHRESHOLD
-        if size < ZERO:
-            return Region.BELOW_THRESHOLD
         return Region.ABOVE_THRESHOLD if beyond > ZERO else Region.BELOW_PSEUDOTHRESHOLD
 
     @property

@@ -29,6 +29,7 @@ from loopint.integrals.numerators import numerator_series
 
 MAX_POWER = 12
 ISOLATED = "_isolated"
+SINGULAR = (Region.THRESHOLD, Region.ON_SHELL)
 
 
 def check(powers: tuple[int, ...], dimension: int) -> None:  # noqa: ARG001 - any dimension
@@ -62,16 +63,17 @@ def region(point: TwoPoint, powers: tuple[int, ...], dimension: int) -> str:
     at eps = 0, dimensional regularisation still gives a finite value or a pole exactly there, but
     it is not a limit.
     """
-    name = str(point.region)
+    found = point.region
     n1, n2 = powers
-    if n1 > 0 and n2 > 0:
-        twice_s = dimension - 2 * (n1 + n2)
-        massive = n2 if point.m1_squared.is_zero else n1
-        at_threshold = point.region is Region.THRESHOLD and twice_s <= -1
-        on_shell = point.region is Region.ON_SHELL and massive + twice_s <= 0
-        if at_threshold or on_shell:
-            name += ISOLATED
-    return name
+    isolated = False
+    if n1 > 0 and n2 > 0 and found in SINGULAR:
+        exponent = dimension - 2 * (n1 + n2)  # 2s
+        if found is Region.THRESHOLD:
+            isolated = exponent + 1 <= 0
+        else:
+            massive = n2 if point.m1_squared.is_zero else n1
+            isolated = massive + exponent <= 0
+    return found.value + ISOLATED if isolated else found.value
 
 
 def series(

@@ -42,20 +42,19 @@ def logarithm_integral(point: TwoPoint) -> Ball | None:
 
 
 def _two_masses(p: fmpq, m1: fmpq, m2: fmpq, kallen: fmpq) -> Ball:
-    difference = m1 - m2
-    half_inverse = 1 / arb(2 * p)
+    twice = arb(2 * p)
     below = arb(m1 + m2 - p)
     log1, log2 = arb(m1).log(), arb(m2).log()
-    ends = (p + difference) * log1 + (p - difference) * log2
+    both = log1 + log2
+    ends = p * both + (m1 - m2) * (log1 - log2)
     if kallen < ZERO:
         root = arb(-kallen).sqrt()
-        return (ends + 2 * root * arb.atan2(root, below)) * half_inverse - 2
+        return (ends + 2 * root * arb.atan2(root, below)) / twice - 2
     root = arb(kallen).sqrt()
-    half = (log1 + log2) / 2
-    if below > 0:
-        return (ends + 2 * root * (half - ((root + below) / 2).log())) * half_inverse - 2
-    real = (ends + 2 * root * (((root - below) / 2).log() - half)) * half_inverse - 2
-    return acb(real, -2 * root * half_inverse * arb.pi())
+    if p < m1 + m2:
+        return (ends + root * (both - 2 * ((root + below) / 2).log())) / twice - 2
+    real = ends + root * (2 * ((root - below) / 2).log() - both)
+    return acb(real / twice - 2, -2 * arb.pi() * root / twice)
 
 
 def _one_mass(p: fmpq, m: fmpq) -> Ball:

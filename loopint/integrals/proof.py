@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 from loopint.core.errors import InputError, MorePrecisionNeeded
 from loopint.core.laurent import BallSeries, LaurentSeries, worst_accuracy_bits
@@ -19,8 +18,7 @@ GUARD_BITS = 20
 FLOAT_BITS = 58  # a float64 and a few bits to decide how it rounds
 
 
-@dataclass(frozen=True, slots=True)
-class Evaluation:
+class Evaluation(NamedTuple):
     """One integral at one point: proven balls, and how they were obtained.
 
     `proven` is False when `max_precision_bits` was reached before the digits asked for; the
