@@ -12,6 +12,7 @@ from typing import Annotated
 import typer
 
 from loopint.core.errors import LoopintError
+from loopint.pipeline.startup import leave_out_pandas
 
 app = typer.Typer(
     name="loopint",
@@ -348,5 +349,11 @@ def main() -> None:
     sys.exit(UNUSABLE)
 
 
-if __name__ == "__main__":
+def program() -> None:
+    """Run `main` in a process of its own."""
+    leave_out_pandas()
     main()
+
+
+if __name__ == "__main__":
+    program()

@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, Any, TypeAlias, TypeVar
 
 from loopint.pipeline.errors import EngineError
 from loopint.pipeline.interrupts import interrupts_held
+from loopint.pipeline.startup import leave_out_pandas
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Generator, Iterator, Sequence
@@ -129,6 +130,7 @@ def _start_worker(make: Callable[[], Callable[[Any], Any]]) -> None:
     global _function  # noqa: PLW0603 - one function per worker process, set once
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # also where it could not be held
     threading.Thread(target=_die_with_parent, daemon=True).start()
+    leave_out_pandas()
     _function = make()
 
 
