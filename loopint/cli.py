@@ -337,7 +337,7 @@ def formula(
 def main() -> None:
     """Run the command line; every error becomes one sentence on stderr and exit code 2."""
     try:
-        app()
+        app(prog_name="loopint")
     except LoopintError as error:
         message = str(error)
     except OSError as error:
