@@ -262,7 +262,7 @@ def test_full_disk(tmp_path):
 
 
 def test_interrupted_run_says_how_to_continue(tmp_path):
-    config = write_run(tmp_path, points_table(2000), workers=2, chunk_rows=10)
+    config = write_run(tmp_path, points_table(8000), workers=2, chunk_rows=10)
     process = subprocess.Popen(
         [sys.executable, "-m", "loopint.cli", "run", str(config)],
         stdout=subprocess.PIPE,

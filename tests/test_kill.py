@@ -7,6 +7,7 @@ import os
 import random
 import resource
 import shutil
+import signal
 import subprocess
 import sys
 import time
@@ -258,3 +259,38 @@ def test_a_table_directory_that_vanishes_is_one_sentence(tmp_path):
     with pytest.raises(Exception, match=r"part-00001\.parquet cannot be written: No such file"):
         run_config(config, progress=remove)
     assert run_config(config).summary["rows_resumed"] == 0
+
+
+class Finalized:
+    """What an interrupt can meet: a finalizer, whose exceptions Python drops."""
+
+    def __del__(self):
+        signal.raise_signal(signal.SIGINT)
+
+
+@pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
+def test_an_interrupt_that_python_drops_is_noticed(expected, tmp_path):
+    config = load_config(write(tmp_path))
+
+    def progress(done: int, _: int) -> None:
+        if done == 3 * CHUNK:
+            Finalized()
+
+    with pytest.raises(KeyboardInterrupt):
+        run_config(config, progress=progress)
+    assert records(tmp_path / "out") == 4
+    assert signal.getsignal(signal.SIGINT) is signal.default_int_handler
+    assert run_config(config).summary["rows_resumed"] == 4 * CHUNK
+    assert file_contents(tmp_path / "out") == expected
+
+
+def test_what_a_replaced_worker_left_half_written_is_removed(expected, tmp_path):
+    config, out = load_config(write(tmp_path)), tmp_path / "out"
+
+    def progress(done: int, _: int) -> None:
+        if done == 3 * CHUNK:
+            (out / "table" / ".part-00001.parquet.0badc0de.tmp").write_bytes(b"PAR1")
+
+    run_config(config, progress=progress)
+    assert file_contents(out) == expected
+    assert not list(out.rglob(".*.tmp"))

@@ -13,6 +13,7 @@ from loopint.pipeline.chunks import ChunkEvaluator, open_run
 from loopint.pipeline.engines import choose_engine, usable_cores
 from loopint.pipeline.errors import ConfigError
 from loopint.pipeline.exports import write_npz
+from loopint.pipeline.interrupts import interrupts_remembered
 from loopint.pipeline.manifest import manifest_content, package_version, plan_hash
 from loopint.pipeline.run_directory import RunDirectory, write_json
 from loopint.pipeline.tables import merge_parquet, write_csv
@@ -141,11 +142,16 @@ def _evaluate_chunks(
     if missing:
         source = opened.source.with_absolute_paths()
         make = partial(ChunkEvaluator, _with_absolute_directory(config), source, plan)
-        with closing(engine(make, missing)) as records:  # Ctrl-C ends the workers at once
+        with (
+            interrupts_remembered() as raise_interrupt,
+            closing(engine(make, missing)) as records,  # Ctrl-C ends the workers at once
+        ):
             for record in records:
+                raise_interrupt()
                 account.add(record)
                 if progress is not None:
                     progress(account.rows, total)
+        directory.remove_leftovers()  # of workers that died and were replaced
         opened.source.check_unchanged()
     return resumed
 

@@ -212,11 +212,15 @@ class RunDirectory:
                 "--overwrite to replace them, or another [output] directory"
             )
         self.table.mkdir(exist_ok=True)
+        self.remove_leftovers()
+        if found != plan_hash or overwrite:
+            write_json(self.manifest, manifest)
+
+    def remove_leftovers(self) -> None:
+        """Remove what processes that were killed have begun to write."""
         for directory in (self.path, self.table, self.work):
             for leftover in directory.glob(".*.tmp"):
                 leftover.unlink(missing_ok=True)
-        if found != plan_hash or overwrite:
-            write_json(self.manifest, manifest)
 
     def plan_hash(self) -> str | None:
         """Return the hash of the plan whose results the directory holds, or None."""
