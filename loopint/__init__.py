@@ -18,16 +18,19 @@ if TYPE_CHECKING:
     from loopint.arrays.result import ArrayResult
     from loopint.arrays.tadpole import tadpole_array
     from loopint.frames import evaluate
-    from loopint.interpolation.interpolant import Interpolant, load_interpolant
+    from loopint.interpolation.files import load_interpolant
+    from loopint.interpolation.interpolant import Interpolant
+    from loopint.interpolation.surface import SurfaceInterpolant
 
 __version__ = "0.1.0"
 
 _LATER = {
     "ArrayResult": "arrays.result",
     "Interpolant": "interpolation.interpolant",
+    "SurfaceInterpolant": "interpolation.surface",
     "bubble_array": "arrays.bubble",
     "evaluate": "frames",
-    "load_interpolant": "interpolation.interpolant",
+    "load_interpolant": "interpolation.files",
     "tadpole_array": "arrays.tadpole",
 }
 
@@ -39,6 +42,7 @@ __all__ = [
     "LoopintError",
     "LostOrderError",
     "Reduction",
+    "SurfaceInterpolant",
     "UnregulatedError",
     "UnsupportedIntegralError",
     "__version__",

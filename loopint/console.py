@@ -231,10 +231,9 @@ def show_interpolants(built: Sequence[Built]) -> None:
     out = _stdout()
     for one in built:
         interpolant = one.interpolant
-        low, high = interpolant.range
         out.print(
-            f"{interpolant.name}: {escape(interpolant.integral)}, p^2 from {low:g} to {high:g}, "
-            f"{len(interpolant.centres)} pieces of degree up to {one.degree}"
+            f"{interpolant.name}: {escape(interpolant.integral)}, {interpolant.region}, "
+            f"{interpolant.pieces} pieces of degree up to {one.degree}"
         )
         for order, bound in interpolant.error_bounds.items():
             out.print(f"  eps^{order}: |error| <= {bound:.1e} everywhere (proven)")

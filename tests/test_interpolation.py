@@ -18,7 +18,8 @@ from loopint.cli import main
 from loopint.core.conventions import Conventions
 from loopint.interpolation.analyticity import Sheets, coefficient_bound
 from loopint.interpolation.build import build_interpolants
-from loopint.interpolation.interpolant import InterpolantError, load_interpolant
+from loopint.interpolation.files import load_interpolant
+from loopint.interpolation.interpolant import InterpolantError
 from loopint.pipeline.config import ConfigError, InterpolationRunConfig, load_config_as
 
 ROOT = Path(__file__).parents[1]

@@ -94,6 +94,15 @@ class Conventions:
             ) from None
         return cls(parsed_measure, parsed_sign, check_mu_squared(mu_squared))
 
+    @property
+    def described(self) -> dict[str, str]:
+        """The three settings as text."""
+        return {
+            "measure": str(self.measure),
+            "propagator_sign": str(self.propagator_sign),
+            "mu_squared": str(self.mu_squared),
+        }
+
 
 def check_mu_squared(value: object) -> fmpq:
     """Return mu^2 as a positive rational or raise `InputError`."""

@@ -75,12 +75,17 @@ class Sheets:
         return GROWTH * (first + second)
 
 
-def coefficient_bound(sheets: Sheets, radius: float, conventions: Conventions) -> float:
-    """Bound the finite part of B on both sheets for |v| <= radius, in units where mu = 1."""
+def prefactor_sizes(conventions: Conventions) -> tuple[float, float]:
+    """Return |a| and |b| of the prefactor a/eps + b, so that |finite part| <= |b| + |a J|."""
     factor = conventions.measure.factor(4) * EpsilonFactor.gamma(0, 1)
     with working_precision(64):
         series = factor.series_through(0)
-        pole, constant = (float(abs(series[k]).upper()) for k in (-1, 0))
+        return float(abs(series[-1]).upper()), float(abs(series[0]).upper())
+
+
+def coefficient_bound(sheets: Sheets, radius: float, conventions: Conventions) -> float:
+    """Bound the finite part of B on both sheets for |v| <= radius, in units where mu = 1."""
+    pole, constant = prefactor_sizes(conventions)
     return GROWTH * (constant + pole * sheets.bound(radius))
 
 

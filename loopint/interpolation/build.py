@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
-from flint import arb, fmpq
+from flint import arb, arb_mat, fmpq
 
 from loopint.core.conventions import Conventions
 from loopint.core.errors import InputError
@@ -24,22 +24,32 @@ from loopint.interpolation.analyticity import (
     coefficient_bound,
     truncation,
 )
+from loopint.interpolation.chebyshev import (
+    BITS,
+    NODE_DIGITS,
+    SHIFT_ERROR,
+    clenshaw_error,
+    from_values,
+    lebesgue_constant,
+    nearby_rational,
+    node,
+)
 from loopint.interpolation.export import write_exports
-from loopint.interpolation.interpolant import Interpolant, save_interpolant
+from loopint.interpolation.files import save_interpolant
+from loopint.interpolation.interpolant import Interpolant
+from loopint.interpolation.surface import SurfaceInterpolant
+from loopint.interpolation.surface_build import SurfaceJob
 from loopint.pipeline.errors import ConfigError, unknown_name
 from loopint.pipeline.rounded import finite_double
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
 
-    from loopint.pipeline.config import IntegralConfig, InterpolationRunConfig
+    from loopint.pipeline.config import IntegralConfig, InterpolationRunConfig, MassKeys
     from loopint.pipeline.expressions import Expression
     from loopint.pipeline.interpolation_config import InterpolationConfig
 
-UNIT = 2.0**-53
 MOST_PIECES, MOST_DEGREE = 2000, 60
-NODE_DIGITS = 24
-BITS = 160
 Progress = Callable[[int, int], None]
 
 
@@ -47,7 +57,7 @@ Progress = Callable[[int, int], None]
 class Built:
     """An interpolant and the files it is saved in."""
 
-    interpolant: Interpolant
+    interpolant: Interpolant | SurfaceInterpolant
     files: tuple[Path, ...]
     degree: int
 
@@ -62,18 +72,125 @@ def build_interpolants(
     ConfigError
         If an interpolation does not fit the config, or is not covered.
     """
-    jobs = [_Job.prepare(config, entry) for entry in config.interpolations]
+    jobs = [_prepare(config, entry) for entry in config.interpolations]
     directory = config.output.directory
     directory.mkdir(parents=True, exist_ok=True)
     built = []
-    for number, job in enumerate(jobs):
+    for number, (job, entry) in enumerate(zip(jobs, config.interpolations, strict=True)):
         interpolant, degree = job.build()
         files = list(save_interpolant(interpolant, directory))
-        files += write_exports(interpolant, directory, job.entry.exports)
+        files += write_exports(interpolant, directory, entry.exports)
         built.append(Built(interpolant, tuple(files), degree))
         if progress is not None:
             progress(number + 1, len(jobs))
     return built
+
+
+def _prepare(config: InterpolationRunConfig, entry: InterpolationConfig) -> _Job | SurfaceJob:
+    """Check one interpolation and resolve its kinematics."""
+    where = f'{config.where}[[interpolation]] "{entry.name}"'
+    integrals = {one.name: one for one in config.integrals}
+    if entry.integral not in integrals:
+        raise ConfigError(
+            f'{where} integral = "{entry.integral}" {unknown_name(entry.integral, integrals)}'
+        )
+    integral = integrals[entry.integral]
+    if (integral.family, integral.powers, integral.dimension) != ("bubble", (1, 1), 4):
+        raise ConfigError(
+            f"{where} integral {entry.integral}: no proven interpolation; accepted: a bubble "
+            "with powers [1, 1] and dimension 4"
+        )
+    wrong = [k for k in entry.orders if not -1 <= k <= HIGHEST_ORDER]
+    if wrong:
+        raise ConfigError(
+            f"{where} orders has {wrong[0]}; accepted: -1 and {HIGHEST_ORDER} (higher ones "
+            "have a logarithm at threshold)"
+        )
+    if (entry.mass is None) != (entry.mass_range is None):
+        raise ConfigError(f"{where}: mass and mass_range; accepted: both or none of them")
+    try:
+        return _kinematics(config, entry, integral, where)
+    except InputError as error:
+        raise ConfigError(f"{where}: {error}") from None
+
+
+def _kinematics(
+    config: InterpolationRunConfig,
+    entry: InterpolationConfig,
+    integral: IntegralConfig,
+    where: str,
+) -> _Job | SurfaceJob:
+    expressions = integral.expressions()
+    known = {name: value.evaluate({}) for name, value in entry.constants.items()}
+    variable = expressions["p_squared"].text
+    if expressions["p_squared"].columns != {variable}:
+        raise InputError(f"p_squared = {variable}; accepted: a column, which is the variable")
+    squares = [_squared_mass(keys, expressions, known, entry.mass) for keys in integral.mass_keys]
+    ends = _ends(entry.range, known, "range")
+    mu_squared = _constant(config.conventions.mu_squared, known, "mu_squared")
+    conventions = Conventions.parse(
+        config.conventions.measure, config.conventions.propagator_sign, mu_squared
+    )
+    fixed = [square for square in squares if square is not None]
+    if entry.mass is None or entry.mass_range is None:
+        return _Job(entry, conventions, *ends, fixed[0], fixed[1], where)
+    if len(fixed) != 1:
+        raise InputError(
+            f"mass = {entry.mass!r}; accepted: the column that is the mass (not its square) of one "
+            f"line of {integral.name}"
+        )
+    line = squares.index(None)
+    lowest, highest = _ends(entry.mass_range, known, "mass_range")
+    if lowest <= 0:
+        raise InputError(f"mass_range starts at {lowest}; accepted: positive masses")
+    first, second = ("m1", "m2") if line == 0 else ("m2", "m1")
+    text = f"bubble(1, 1), d = 4 - 2 eps, {first} = {entry.mass}, {second}_squared = {fixed[0]}"
+    return SurfaceJob(
+        entry.name,
+        text,
+        entry.orders,
+        float(entry.error),
+        where,
+        conventions,
+        _as_doubles(ends, f"{where} range"),
+        entry.mass,
+        _as_doubles((lowest, highest), f"{where} mass_range"),
+        fixed[0],
+        line,
+    )
+
+
+def _squared_mass(
+    keys: MassKeys,
+    expressions: Mapping[str, Expression],
+    known: Mapping[str, fmpq],
+    varying: str | None,
+) -> fmpq | None:
+    """Return a squared mass, or None if the mass is the variable."""
+    if keys.width in expressions or keys.imaginary in expressions:
+        raise InputError(f"{keys.squared} is complex; accepted: stable particles")
+    squared = keys.squared in expressions
+    key = keys.squared if squared else keys.mass
+    if not squared and varying is not None and expressions[key].text == varying:
+        return None
+    mass = _constant(expressions[key], known, key)
+    if mass <= 0:
+        raise InputError(f"{key} = {mass}; accepted: positive masses")
+    return mass if squared else mass * mass
+
+
+def _ends(
+    written: tuple[Expression, Expression], known: Mapping[str, fmpq], key: str
+) -> tuple[fmpq, fmpq]:
+    low, high = (_constant(value, known, key) for value in written)
+    if low >= high:
+        raise InputError(f"{key} = [{low}, {high}]; accepted: two increasing numbers")
+    return low, high
+
+
+def _as_doubles(ends: tuple[fmpq, fmpq], where: str) -> tuple[float, float]:
+    """Return the ends of a range as doubles: a float that a user wrote is itself."""
+    return finite_double(ends[0], where), finite_double(ends[1], where)
 
 
 @dataclass(frozen=True)
@@ -88,68 +205,10 @@ class _Job:
     m2: fmpq
     where: str
 
-    @classmethod
-    def prepare(cls, config: InterpolationRunConfig, entry: InterpolationConfig) -> _Job:
-        where = f'{config.where}[[interpolation]] "{entry.name}"'
-        integrals = {one.name: one for one in config.integrals}
-        if entry.integral not in integrals:
-            raise ConfigError(
-                f'{where} integral = "{entry.integral}" {unknown_name(entry.integral, integrals)}'
-            )
-        integral = integrals[entry.integral]
-        if (integral.family, integral.powers, integral.dimension) != ("bubble", (1, 1), 4):
-            raise ConfigError(
-                f"{where} integral {entry.integral}: no proven interpolation; accepted: a bubble "
-                "with powers [1, 1] and dimension 4"
-            )
-        wrong = [k for k in entry.orders if not -1 <= k <= HIGHEST_ORDER]
-        if wrong:
-            raise ConfigError(
-                f"{where} orders has {wrong[0]}; accepted: -1 and {HIGHEST_ORDER} (higher ones "
-                "have a logarithm at threshold)"
-            )
-        try:
-            return cls._kinematics(config, entry, integral, where)
-        except InputError as error:
-            raise ConfigError(f"{where}: {error}") from None
-
-    @classmethod
-    def _kinematics(
-        cls,
-        config: InterpolationRunConfig,
-        entry: InterpolationConfig,
-        integral: IntegralConfig,
-        where: str,
-    ) -> _Job:
-        expressions = integral.expressions()
-        known = {name: value.evaluate({}) for name, value in entry.constants.items()}
-        variable = expressions["p_squared"].text
-        masses = []
-        for keys in integral.mass_keys:
-            if keys.width in expressions or keys.imaginary in expressions:
-                raise InputError(f"{keys.squared} is complex; accepted: stable particles")
-            squared = keys.squared in expressions
-            key = keys.squared if squared else keys.mass
-            mass = _constant(expressions[key], known, key)
-            if mass <= 0:
-                raise InputError(f"{key} = {mass}; accepted: positive masses")
-            masses.append(mass if squared else mass * mass)
-        if expressions["p_squared"].columns != {variable}:
-            raise InputError(f"p_squared = {variable}; accepted: a column, which is the variable")
-        low, high = (_constant(value, known, "range") for value in entry.range)
-        if low >= high:
-            raise InputError(f"range = [{low}, {high}]; accepted: two increasing numbers")
-        mu_squared = _constant(config.conventions.mu_squared, known, "mu_squared")
-        conventions = Conventions.parse(
-            config.conventions.measure, config.conventions.propagator_sign, mu_squared
-        )
-        return cls(entry, conventions, low, high, masses[0], masses[1], where)
-
     @property
     def ends(self) -> tuple[float, float]:
-        """The ends of the range as doubles: a float that a user wrote is itself."""
-        where = f"{self.where} range"
-        return finite_double(self.low, where), finite_double(self.high, where)
+        """The ends of the range as doubles."""
+        return _as_doubles((self.low, self.high), f"{self.where} range")
 
     def build(self) -> tuple[Interpolant, int]:
         """Return the interpolant and the largest degree."""
@@ -217,11 +276,7 @@ class _Job:
             np.array([piece.centre for piece in pieces]),
             np.array([piece.half for piece in pieces]),
             dict(coefficients),
-            {
-                "measure": str(self.conventions.measure),
-                "propagator_sign": str(self.conventions.propagator_sign),
-                "mu_squared": str(self.conventions.mu_squared),
-            },
+            self.conventions.described,
         )
 
     def _pieces(self, threshold: arb, sheets: Sheets, unit: float) -> list[Piece]:
@@ -258,11 +313,7 @@ class _Job:
     def _interpolate(
         self, piece: Piece, n: int, evaluator: Evaluator, threshold: arb
     ) -> dict[int, tuple[np.ndarray, float]]:
-        """Return the rounded Chebyshev coefficients by order, and the error of the nodes.
-
-        The nodes are the n+1 Chebyshev points of the second kind; the interpolant of values within
-        e of the true ones is within (2/pi log(n+1) + 1) e (Trefethen, theorem 15.2).
-        """
+        """Return the rounded Chebyshev coefficients by order, and the error of the nodes."""
         with working_precision(BITS):
             nodes = [_node(piece, j, n, threshold) for j in range(n + 1)]
             masses = ExactComplex(self.m1), ExactComplex(self.m2)
@@ -275,15 +326,15 @@ class _Job:
                     found[k] = (np.array([value] + [0.0] * n, dtype=np.complex128), bound)
                     continue
                 largest = max(float(ball.rad().upper()) for ball in balls)
-                re = _chebyshev([ball.real.mid() for ball in balls])
-                im = _chebyshev([ball.imag.mid() for ball in balls])
+                parts = arb_mat([[ball.real.mid(), ball.imag.mid()] for ball in balls])
+                re, im = from_values(parts).transpose().tolist()
                 rounded = [
                     (float_with_bound(a), float_with_bound(b)) for a, b in zip(re, im, strict=True)
                 ]
                 array = np.array([complex(a[0], b[0]) for a, b in rounded])
                 rounding = sum(a[1] + b[1] for a, b in rounded)
-                lebesgue = 2 / math.pi * math.log(n + 1) + 1
-                found[k] = (array, 1.001 * (lebesgue * (largest + _shift_error(piece)) + rounding))
+                nodes_error = lebesgue_constant(n) * (largest + SHIFT_ERROR)
+                found[k] = (array, 1.001 * (nodes_error + rounding))
         return found
 
 
@@ -338,50 +389,13 @@ def _cut(
 
 def _node(piece: Piece, j: int, n: int, threshold: arb) -> fmpq:
     """Return s at a Chebyshev point, as a rational number close to it."""
-    x = arb(fmpq(j, n)).cos_pi()
-    w = arb(piece.centre) + arb(piece.half) * x
-    s = threshold - w * w if piece.below else threshold + w * w
-    mantissa, exponent = (int(part) for part in s.mid().man_exp())
-    return fmpq(mantissa) * fmpq(2) ** exponent
-
-
-def _shift_error(piece: Piece) -> float:
-    """Bound the effect of rounding the nodes to BITS bits, far below everything else."""
-    return 1e-30 * (1 + piece.stop)
-
-
-def _chebyshev(values: list[arb]) -> list[arb]:
-    """Return the Chebyshev coefficients of the interpolant in points of the second kind."""
-    n = len(values) - 1
-    weights = [fmpq(1, 2) if j in {0, n} else fmpq(1) for j in range(n + 1)]
-    found = []
-    for k in range(n + 1):
-        total = arb(0)
-        for j, (value, weight) in enumerate(zip(values, weights, strict=True)):
-            total += value * arb(fmpq(j * k, n)).cos_pi() * arb(weight)
-        total = total * 2 / n
-        found.append(total / 2 if k in {0, n} else total)
-    return found
+    w = node(piece.centre, piece.half, j, n)
+    return nearby_rational(threshold - w * w if piece.below else threshold + w * w)
 
 
 def _evaluation_error(c: np.ndarray, piece: Piece) -> float:
-    """Bound what `interpolant` loses in doubles: Clenshaw's recurrence and the variable x.
-
-    Each step adds at most UNIT (4 |2x b_(k+1)| + 3 |b_(k+2)| + 2 |c_k|), which reaches the result
-    multiplied by at most k+1, and |b_k| <= sum_j (j-k+1) |c_j|.  x is within 8 UNIT (1 + |w|/h).
-    """
-    sizes = np.abs(c.real) + np.abs(c.imag)
-    n = len(sizes)
-    beta = np.zeros(n + 2)
-    running = 0.0
-    for k in range(n - 1, -1, -1):
-        running += sizes[k:].sum()
-        beta[k] = running
-    place = np.arange(n, dtype=np.float64)
-    clenshaw = ((place + 1) * (8 * beta[1 : n + 1] + 3 * beta[2 : n + 2] + 2 * sizes)).sum()
-    slope = (place**2 * sizes).sum()
-    variable = 8 * (1 + piece.stop / piece.half) * slope
-    return float(1.01 * UNIT * (clenshaw + variable + sizes.sum()))
+    """Bound what `interpolant` loses in doubles; x is within 8 UNIT (1 + |w|/h)."""
+    return clenshaw_error(np.abs(c.real) + np.abs(c.imag), 8 * (1 + piece.stop / piece.half))
 
 
 def _constant(expression: Expression, known: Mapping[str, fmpq], key: str) -> fmpq:

@@ -6,18 +6,28 @@ from collections.abc import Iterable
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from loopint.interpolation import surface_export
+from loopint.interpolation.c_arrays import c_array, order_tag
+from loopint.interpolation.interpolant import Interpolant
+
 if TYPE_CHECKING:
-    from loopint.interpolation.interpolant import Interpolant
+    from loopint.interpolation.surface import SurfaceInterpolant
 
 
-def write_exports(interpolant: Interpolant, directory: Path, exports: Iterable[str]) -> list[Path]:
+def write_exports(
+    interpolant: Interpolant | SurfaceInterpolant, directory: Path, exports: Iterable[str]
+) -> list[Path]:
     """Write NAME.txt and NAME.h as asked; return their paths."""
-    makers = {"text": (".txt", as_text), "c": (".h", as_c)}
     found = []
     for kind in exports:
-        ending, make = makers[kind]
-        path = directory / f"{interpolant.name}{ending}"
-        path.write_text(make(interpolant), encoding="ascii")
+        path = directory / f"{interpolant.name}{'.h' if kind == 'c' else '.txt'}"
+        if isinstance(interpolant, Interpolant):
+            content = as_c(interpolant) if kind == "c" else as_text(interpolant)
+        elif kind == "c":
+            content = surface_export.as_c(interpolant)
+        else:
+            content = surface_export.as_text(interpolant)
+        path.write_text(content, encoding="ascii")
         found.append(path)
     return found
 
@@ -127,16 +137,16 @@ def as_c(interpolant: Interpolant) -> str:
     pieces = len(interpolant.centres)
     first = interpolant.coefficients[interpolant.orders[0]]
     arrays = [
-        _array(f"{name}_edges", interpolant.edges),
-        _array(f"{name}_centres", interpolant.centres),
-        _array(f"{name}_halves", interpolant.halves),
+        c_array(f"{name}_edges", interpolant.edges),
+        c_array(f"{name}_centres", interpolant.centres),
+        c_array(f"{name}_halves", interpolant.halves),
     ]
     cases = []
     for order in interpolant.orders:
-        tag = f"m{-order}" if order < 0 else str(order)
+        tag = order_tag(order)
         values = interpolant.coefficients[order]
-        arrays.append(_array(f"{name}_re_{tag}", values.real.ravel()))
-        arrays.append(_array(f"{name}_im_{tag}", values.imag.ravel()))
+        arrays.append(c_array(f"{name}_re_{tag}", values.real.ravel()))
+        arrays.append(c_array(f"{name}_im_{tag}", values.imag.ravel()))
         place = f"low * {upper}_TERMS"
         pointers = f"cr = {name}_re_{tag} + {place}; ci = {name}_im_{tag} + {place};"
         cases.append(f"    case {order}: {pointers} break;")
@@ -160,11 +170,3 @@ def as_c(interpolant: Interpolant) -> str:
         threshold_high=interpolant.threshold[0],
         threshold_low=interpolant.threshold[1],
     )
-
-
-def _array(name: str, values: Iterable[float]) -> str:
-    numbers = [f"{float(value):.17g}" for value in values]
-    numbers = [n if any(c in n for c in ".einf") else f"{n}.0" for n in numbers]
-    lines = [", ".join(numbers[i : i + 4]) for i in range(0, len(numbers), 4)]
-    body = ",\n    ".join(lines)
-    return f"static const double {name}[{len(numbers)}] = {{\n    {body}}};"

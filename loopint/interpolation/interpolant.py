@@ -7,13 +7,9 @@ in that variable the threshold is a regular point.
 
 from __future__ import annotations
 
-import hashlib
-import json
 from collections.abc import Mapping
 from dataclasses import dataclass
 from functools import cached_property
-from pathlib import Path
-from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -22,7 +18,6 @@ from loopint.core.errors import LoopintError
 
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
-FORMAT = 1
 BLOCK = 8192  # the working set stays in the cache
 
 
@@ -69,6 +64,16 @@ class Interpolant:
     halves: Real
     coefficients: Mapping[int, Complex]
     conventions: Mapping[str, str]
+
+    @property
+    def region(self) -> str:
+        """The range in words."""
+        return f"p^2 from {self.range[0]:g} to {self.range[1]:g}"
+
+    @property
+    def pieces(self) -> int:
+        """The number of pieces."""
+        return len(self.centres)
 
     @cached_property
     def pieces_below(self) -> int:
@@ -181,7 +186,7 @@ def _clenshaw(coefficients: Complex, piece: NDArray[np.intp], x: Real) -> Comple
     first, last = int(piece.min()), int(piece.max())
     result = np.empty(x.size, dtype=np.complex128)
     if first == last:
-        result.real, result.imag = (_sum(c, x) for c in _parts(coefficients[first]))
+        result.real, result.imag = (chebyshev_sum(c, x) for c in _parts(coefficients[first]))
         return result
     order = np.argsort(piece, kind="stable")
     x, piece = x[order], piece[order]
@@ -191,8 +196,8 @@ def _clenshaw(coefficients: Complex, piece: NDArray[np.intp], x: Real) -> Comple
         if block.size:
             inside = x[starts[i - first] : starts[i - first + 1]]
             re, im = _parts(coefficients[i])
-            result.real[block] = _sum(re, inside)
-            result.imag[block] = _sum(im, inside)
+            result.real[block] = chebyshev_sum(re, inside)
+            result.imag[block] = chebyshev_sum(im, inside)
     return result
 
 
@@ -200,11 +205,11 @@ def _parts(c: Complex) -> tuple[Real, Real]:
     return c.real, c.imag
 
 
-def _sum(c: Real, x: Real) -> Real:
-    """Return sum_k c_k T_k(x) by Clenshaw's recurrence."""
+def chebyshev_sum(c: Real, x: Real) -> Real:
+    """Return sum_k c_k T_k(x) by Clenshaw's recurrence; each c_k is a number or an array like x."""
     if not c.any():
         return np.zeros_like(x)
-    length = int(np.flatnonzero(c)[-1]) + 1
+    length = int(np.flatnonzero(c.any(axis=tuple(range(1, c.ndim))))[-1]) + 1
     double = 2.0 * x
     above, current, work = np.zeros_like(x), np.zeros_like(x), np.empty_like(x)
     for k in range(length - 1, 0, -1):
@@ -226,89 +231,3 @@ def _derivative(coefficients: Complex) -> Complex:
             found[:, k - 1] += found[:, k + 1]
     found[:, 0] /= 2
     return found
-
-
-# Files ------------------------------------------------------------------------------------------
-
-
-def save_interpolant(interpolant: Interpolant, directory: Path) -> tuple[Path, Path]:
-    """Write NAME.parquet (the numbers) and NAME.json (everything else); return both paths."""
-    import pyarrow as pa  # noqa: PLC0415 - evaluation needs NumPy alone
-    import pyarrow.parquet as pq  # noqa: PLC0415
-
-    columns: dict[str, Any] = {
-        "left": interpolant.edges[:-1],
-        "right": interpolant.edges[1:],
-        "centre": interpolant.centres,
-        "half": interpolant.halves,
-    }
-    for order, values in interpolant.coefficients.items():
-        columns[f"re_{order}"] = list(values.real)
-        columns[f"im_{order}"] = list(values.imag)
-    table, text = (directory / f"{interpolant.name}.{end}" for end in ("parquet", "json"))
-    pq.write_table(pa.table(columns), table)
-    content = {
-        "format": FORMAT,
-        "name": interpolant.name,
-        "integral": interpolant.integral,
-        "orders": interpolant.orders,
-        "range": interpolant.range,
-        "error_bounds": {str(k): v for k, v in interpolant.error_bounds.items()},
-        "threshold": interpolant.threshold,
-        "conventions": dict(interpolant.conventions),
-        "table": table.name,
-        "table_sha256": hashlib.sha256(table.read_bytes()).hexdigest(),
-    }
-    text.write_text(json.dumps(content, indent=2) + "\n", encoding="utf-8")
-    return text, table
-
-
-def load_interpolant(path: str | Path) -> Interpolant:
-    """Load an interpolant that `loopint interpolate` saved.
-
-    Parameters
-    ----------
-    path
-        The JSON file; the Parquet file stands beside it.
-
-    Raises
-    ------
-    InterpolantError
-        If the files are not there, damaged, or do not belong together.
-    """
-    import pyarrow.parquet as pq  # noqa: PLC0415 - evaluation needs NumPy alone
-
-    path = Path(path)
-    accepted = "accepted: a JSON file that loopint interpolate wrote, with its Parquet file"
-    try:
-        content = json.loads(path.read_text(encoding="utf-8"))
-        table_path = path.parent / content["table"]
-        if content["format"] != FORMAT:
-            raise InterpolantError(f"{path} has format {content['format']}; accepted: {FORMAT}")
-        if hashlib.sha256(table_path.read_bytes()).hexdigest() != content["table_sha256"]:
-            raise InterpolantError(f"{table_path} does not belong to {path}; {accepted}")
-        table = pq.read_table(table_path)
-        orders = tuple(int(k) for k in content["orders"])
-        coefficients = {
-            k: np.array(table.column(f"re_{k}").to_pylist())
-            + 1j * np.array(table.column(f"im_{k}").to_pylist())
-            for k in orders
-        }
-        left, right = (table.column(name).to_numpy() for name in ("left", "right"))
-        return Interpolant(
-            content["name"],
-            content["integral"],
-            orders,
-            (float(content["range"][0]), float(content["range"][1])),
-            {k: float(content["error_bounds"][str(k)]) for k in orders},
-            (float(content["threshold"][0]), float(content["threshold"][1])),
-            np.append(left, right[-1]),
-            table.column("centre").to_numpy(),
-            table.column("half").to_numpy(),
-            coefficients,
-            content["conventions"],
-        )
-    except FileNotFoundError as error:
-        raise InterpolantError(f"{error.filename} does not exist; {accepted}") from None
-    except (OSError, ValueError, KeyError, TypeError, IndexError) as error:
-        raise InterpolantError(f"{path} cannot be loaded: {error}; {accepted}") from None

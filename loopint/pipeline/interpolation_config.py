@@ -1,4 +1,4 @@
-"""`[[interpolation]]`: coefficients to be interpolated over a range of p^2."""
+"""`[[interpolation]]`: coefficients to be interpolated over a range of p^2, or p^2 and a mass."""
 
 from __future__ import annotations
 
@@ -26,6 +26,15 @@ class InterpolationConfig(Section):
     )
     range: tuple[Exact, Exact] = Field(
         strict=False, description="an array of two numbers, the ends of the range of p^2"
+    )
+    mass: str | None = Field(
+        default=None,
+        description="the column that is the mass of one line and a second variable",
+    )
+    mass_range: tuple[Exact, Exact] | None = Field(
+        default=None,
+        strict=False,
+        description="an array of two positive numbers, the ends of the range of mass",
     )
     constants: dict[str, Exact] = Field(
         default={}, description="values of the other columns, as { m_alder = 1.2 }"

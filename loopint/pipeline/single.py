@@ -88,11 +88,7 @@ class PointResult:
             "orders": list(self.integral.orders),
             "derivatives": list(self.integral.derivatives),
             "kinematics": self.kinematics,
-            "conventions": {
-                "mu_squared": str(self.conventions.mu_squared),
-                "propagator_sign": str(self.conventions.propagator_sign),
-                "measure": str(self.conventions.measure),
-            },
+            "conventions": self.conventions.described,
             "digits": self.series.digits,
             "region": self.series.region,
             "method": self.series.method,
