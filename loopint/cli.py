@@ -153,17 +153,40 @@ def report(
     typer.echo(str(write_report(run)))
 
 
-@app.command(epilog="Example: loopint validate configs/quickstart.toml")
-def validate(config: CONFIG, as_json: JSON = False, quiet: QUIET = False) -> None:
-    """Check config and points without evaluating: regions, rejected rows, estimated time."""
+@app.command(
+    epilog="""\b
+Examples:
+  loopint validate configs/quickstart.toml
+  loopint validate runs/quickstart --rows 100"""
+)
+def validate(
+    path: Annotated[
+        Path,
+        typer.Argument(metavar="CONFIG|RUN", help="Config file (TOML), or a run directory."),
+    ],
+    rows: Annotated[
+        int, typer.Option(min=0, max=10**6, help="Rows of a run that are evaluated again.")
+    ] = 20,
+    seed: Annotated[int, typer.Option(help="Draws these rows.")] = 1,
+    as_json: JSON = False,
+    quiet: QUIET = False,
+) -> None:
+    """Check config and points before a run, or verify a finished run.
+
+    Of a config: regions, rejected rows and the estimated time, without evaluating.  Of a run
+    directory: hashes, counts and conventions, and some rows evaluated again.
+    """
     from dataclasses import asdict
+
+    if path.is_dir():
+        _verify(path, rows, seed, as_json, quiet)
 
     from loopint.console import progress_bar, show_rejections, show_survey
     from loopint.pipeline.config import load_config
     from loopint.pipeline.estimate import survey_config
 
     with progress_bar("checking", silent=quiet or as_json) as progress:
-        survey = survey_config(load_config(config), progress=progress)
+        survey = survey_config(load_config(path), progress=progress)
     if as_json:
         typer.echo(json.dumps(asdict(survey), indent=2, default=str))
     elif quiet:
@@ -171,6 +194,22 @@ def validate(config: CONFIG, as_json: JSON = False, quiet: QUIET = False) -> Non
     else:
         show_survey(survey)
     raise typer.Exit(survey.exit_code)
+
+
+def _verify(path: Path, rows: int, seed: int, as_json: bool, quiet: bool) -> None:
+    from dataclasses import asdict
+
+    from loopint.console import show_findings, show_verification
+    from loopint.pipeline.verify import verify_run
+
+    found = verify_run(path, rows=rows, seed=seed)
+    if as_json:
+        typer.echo(json.dumps(asdict(found), indent=2, default=str))
+    elif quiet:
+        show_findings(found)
+    else:
+        show_verification(found)
+    raise typer.Exit(found.exit_code)
 
 
 @app.command(

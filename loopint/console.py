@@ -29,6 +29,7 @@ if TYPE_CHECKING:
     from loopint.pipeline.estimate import Survey
     from loopint.pipeline.run import RunOutcome
     from loopint.pipeline.single import PointResult
+    from loopint.pipeline.verify import Verification
 
 
 def _stdout() -> Console:
@@ -167,6 +168,26 @@ def show_rejections(survey: Survey) -> None:
         )
     if (more := survey.rows_rejected - len(survey.rejections)) > 0:
         err.print(f"loopint: and {more} more row(s) that will be rejected")
+
+
+def show_verification(found: Verification) -> None:
+    """Print what `validate` found in a run directory."""
+    out = _stdout()
+    out.print(f"{escape(str(found.directory))}: {found.files} files as the manifest names them")
+    out.print(
+        f"{found.rows} rows; {found.evaluated} evaluated again: {found.coefficients} coefficients, "
+        f"{found.confirmed} confirmed by quadrature, {len(found.findings)} finding(s)"
+    )
+    for note in found.notes:
+        out.print(f"note: {escape(note)}")
+    show_findings(found)
+
+
+def show_findings(found: Verification) -> None:
+    """Print on stderr what is not as it should be."""
+    err = _stderr()
+    for finding in found.findings:
+        err.print(f"loopint: {escape(str(found.directory))}: {escape(finding)}")
 
 
 def _duration(seconds: float) -> str:

@@ -90,8 +90,12 @@ def manifest_content(
     plan: str,
     input_hashes: Mapping[str, str],
     records: Sequence[ChunkRecord] | None = None,
+    files: Mapping[str, str] | None = None,
 ) -> dict[str, Any]:
-    """Return the content of `manifest.json`; without records, for a run that has just begun."""
+    """Return the content of `manifest.json`; without records, for a run that has just begun.
+
+    `files` gives the SHA-256 of the files beside the table parts, which have theirs in the records.
+    """
     content = config_as_dict(config)
     result: dict[str, Any] = {
         "title": content.get("title"),
@@ -112,4 +116,5 @@ def manifest_content(
             }
             for record in records
         ]
+        result["files"] = dict(files or {})
     return result

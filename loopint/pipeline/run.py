@@ -115,7 +115,8 @@ def run_config(
             "workers": None if config.execution.scheduler else workers,
         }
         write_json(directory.summary, summary)
-        write_json(directory.manifest, manifest_content(config, plan, inputs, account.records()))
+        records, hashes = account.records(), directory.closing_hashes()
+        write_json(directory.manifest, manifest_content(config, plan, inputs, records, hashes))
     return RunOutcome(directory.path, exit_code(summary), summary)
 
 

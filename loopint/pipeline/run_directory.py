@@ -216,6 +216,11 @@ class RunDirectory:
         if found != plan_hash or overwrite:
             write_json(self.manifest, manifest)
 
+    def closing_hashes(self) -> dict[str, str]:
+        """Return the SHA-256 of the files that cover all chunks, by their names."""
+        files = (self.csv, self.npz, self.rejected, self.cross_check, self.summary)
+        return {path.name: file_sha256(path) for path in files if path.exists()}
+
     def remove_leftovers(self) -> None:
         """Remove what processes that were killed have begun to write."""
         for directory in (self.path, self.table, self.work):
