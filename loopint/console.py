@@ -81,8 +81,8 @@ def show_run(outcome: RunOutcome, report: Path | None = None) -> None:
     table.add_column("below digits", justify="right")
     for name, entry in summary["integrals"].items():
         for region, statuses in entry["regions"].items():
-            ok, below = statuses.get("ok", 0), statuses.get("below_digits", 0)
-            table.add_row(name, region, str(ok), str(below) if below else "")
+            below = statuses.get("below_digits", 0) + statuses.get("timed_out", 0)
+            table.add_row(name, region, str(statuses.get("ok", 0)), str(below) if below else "")
     out.print(table)
     worst = summary["worst_digits"]
     proven = "all coefficients exact" if worst is None else f"at least {worst} digits proven"
@@ -119,6 +119,11 @@ def show_attention(outcome: RunOutcome) -> None:
         err.print(
             f"loopint: {summary['results_below_digits']} result(s) below {summary['digits']} "
             "digits; their status is below_digits and their bounds hold"
+        )
+    if summary["results_timed_out"]:
+        err.print(
+            f"loopint: {summary['results_timed_out']} result(s) not reached within [accuracy] "
+            "time_limit; their status is timed_out"
         )
     if checks["disagrees"]:
         named = ", ".join(

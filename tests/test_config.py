@@ -193,6 +193,7 @@ def test_plain_data_is_json_and_complete(tmp_path: Path) -> None:
         "digits": 40,
         "snap_tolerance": "0.000000001",
         "max_precision_bits": 4000,
+        "time_limit": "600",
     }
     assert data["conventions"]["measure"] == "r_gamma"
     assert type(data["conventions"]["measure"]) is str

@@ -17,6 +17,7 @@ import mpmath
 import numpy as np
 import pandas as pd
 import pyarrow as pa
+import pyarrow.csv
 import pyarrow.parquet as pq
 import pytest
 
@@ -58,7 +59,7 @@ def test_long_table_holds_every_row_integral_and_order(reference):
     assert list(table["integral"].unique()) == ["mixed", "equal", "loop"]
     assert set(table["status"]) == {"ok"}
     assert table["digits"].dropna().min() >= 16
-    csv = pd.read_csv(directory / "out" / "table.csv", float_precision="round_trip")
+    csv = pa.csv.read_csv(directory / "out" / "table.csv").to_pandas()
     pd.testing.assert_frame_equal(
         csv, table, check_dtype=False, rtol=0, atol=0, check_column_type=False
     )

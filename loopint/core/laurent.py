@@ -17,6 +17,7 @@ from loopint.core.numbers import (
     mpf_with_bound,
     real_part,
 )
+from loopint.core.time_limit import check_time
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Mapping
@@ -146,6 +147,7 @@ class BallSeries:
 
 def convolve(a: list[Ball], b: list[Ball], terms: int) -> list[Ball]:
     """Return the first coefficients of the product of two power series."""
+    check_time()
     result: list[Ball] = []
     for n in range(terms):
         total = a[0] * b[n]

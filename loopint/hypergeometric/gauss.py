@@ -37,6 +37,7 @@ from loopint.core.kinematics import logarithm_below_cut
 from loopint.core.laurent import BallSeries, exponential
 from loopint.core.numbers import Ball, ExactComplex, real_part
 from loopint.core.precision import working_precision
+from loopint.core.time_limit import check_time
 from loopint.hypergeometric.lerch import lerch_phi_series
 from loopint.hypergeometric.tables import EpsilonTable
 
@@ -100,6 +101,7 @@ def _taylor_coefficients(
     row = [real_part(x) for x in prefactor.series(length).coefficients]
     ended = False
     for n in range(terms + 1):
+        check_time()
         rows.append((valuation, row))
         for x in (p.a + n, p.b + n):
             if x.constant == 0:

@@ -13,6 +13,7 @@ from flint import acb, arb, fmpq
 
 from loopint.core.laurent import BallSeries
 from loopint.core.numbers import Ball, ExactComplex
+from loopint.core.time_limit import check_time
 
 
 def lerch_phi_series(z: ExactComplex, s: int, a0: fmpq, a1: fmpq, terms: int) -> BallSeries:
@@ -42,6 +43,7 @@ def lerch_phi_series(z: ExactComplex, s: int, a0: fmpq, a1: fmpq, terms: int) ->
     result: list[Ball] = []
     weight = fmpq(1)  # (s)_k (-a1)^k / k!
     for k in range(terms):
+        check_time()
         if weight == 0:
             result.append(arb(0))
         else:

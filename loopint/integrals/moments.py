@@ -34,6 +34,7 @@ from loopint.core.kinematics import Region, TwoPoint, logarithm_below_cut
 from loopint.core.laurent import BallSeries
 from loopint.core.numbers import Ball, ExactComplex, real_part
 from loopint.core.precision import working_precision
+from loopint.core.time_limit import check_time
 from loopint.integrals.powers import (
     mass_power,
     over_linear,
@@ -243,6 +244,7 @@ class FeynmanMoment:
         at_one = self._boundary(m1)
         at_zero = self._boundary(m2)
         for k in range(1, top + 1):
+            check_time()
             right = times_linear(moments[k - 1], k + self.s0, -1).scaled(-beta)
             if at_one is not None:
                 right = right + at_one

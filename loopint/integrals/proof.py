@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, NamedTuple
 from loopint.core.errors import InputError, MorePrecisionNeeded
 from loopint.core.laurent import BallSeries, LaurentSeries, worst_accuracy_bits
 from loopint.core.precision import bits_for_digits, round_up_to_word, working_precision
+from loopint.core.time_limit import check_time
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -22,7 +23,8 @@ class Evaluation(NamedTuple):
     """One integral at one point: proven balls, and how they were obtained.
 
     `proven` is False when `max_precision_bits` was reached before the digits asked for; the
-    balls still hold the true values.
+    balls still hold the true values.  `timed_out` says that a time limit came first: the balls are
+    then NaN.
     """
 
     series: BallSeries
@@ -32,10 +34,13 @@ class Evaluation(NamedTuple):
     method: str
     precision_bits: int
     proven: bool
+    timed_out: bool = False
 
     @property
     def status(self) -> str:
-        """'ok' or 'below_digits'."""
+        """'ok', 'below_digits' or 'timed_out'."""
+        if self.timed_out:
+            return "timed_out"
         return "ok" if self.proven else "below_digits"
 
     def rounded(self) -> LaurentSeries:
@@ -95,6 +100,7 @@ def prove(
     bits = min(round_up_to_word(start + GUARD_BITS), max_bits)
     wishes = 0
     while True:
+        check_time()
         series: BallSeries | None = None
         missing = bits  # double the precision unless the accuracy tells better
         with working_precision(bits):

@@ -241,6 +241,15 @@ class Evaluator:
         region, method = _region_and_method(self.family, integral, point)
         return Evaluation(series, integral.orders, self.digits, region, method, bits, proven)
 
+    def out_of_time(self, point: Point) -> Evaluation:
+        """Return an evaluation that was given up, with NaN in every order."""
+        lowest, highest = self.integral.orders
+        series = BallSeries(lowest, [arb("nan")] * (highest - lowest + 1))
+        region, method = _region_and_method(self.family, self.integral, point)
+        return Evaluation(
+            series, self.integral.orders, self.digits, region, method, 0, False, timed_out=True
+        )
+
     def _series(self, point: Point) -> BallSeries:
         """Expand at the working precision; the point is in units of mu^2."""
         integral, term, conventions = self.integral, self.term, self.conventions

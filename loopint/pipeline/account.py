@@ -69,6 +69,7 @@ class Account:
             "rows_in_table": rows_in_table,
             "rows_rejected": rows_rejected,
             "results_below_digits": sum(entry["below_digits"] for entry in integrals.values()),
+            "results_timed_out": sum(entry["timed_out"] for entry in integrals.values()),
             "table_lines": sum(record.table_lines for record in records),
             "worst_digits": smallest(*(entry["worst_digits"] for entry in integrals.values())),
             "precision_bits": self._precision_bits,
@@ -112,6 +113,7 @@ class _IntegralAccount:
                 for region in sorted(self.regions)
             },
             "below_digits": sum(statuses["below_digits"] for statuses in self.regions.values()),
+            "timed_out": sum(statuses["timed_out"] for statuses in self.regions.values()),
             "worst_digits": self.worst_digits,
             "cross_check": {
                 "coefficients": dict(sorted(self.checks.items())),

@@ -241,7 +241,7 @@ def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> Chu
     for one, chosen in zip(found, sampled, strict=True):
         needed |= ~one.done | chosen
     positions = np.flatnonzero(needed)
-    evaluator = RowEvaluator(opened.plans, digits, accuracy.max_precision_bits)
+    evaluator = RowEvaluator(opened.plans, digits, accuracy.max_precision_bits, accuracy.seconds)
     results = ChunkResults([])
     others: list[dict[int, WrittenIntegral]] = [{} for _ in found]
     for position, cells in zip(positions.tolist(), block.cells(positions), strict=True):
@@ -262,7 +262,11 @@ def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> Chu
                 written = others[place][position] = write_integral(computed, digits)
             if sampled[place][position]:
                 checks = cross_check(
-                    computed, written, digits=check.digits, arithmetic=check.arithmetic
+                    computed,
+                    written,
+                    digits=check.digits,
+                    arithmetic=check.arithmetic,
+                    seconds=accuracy.seconds,
                 )
                 results.checks += [(position, computed.name, each) for each in checks]
     accepted = np.ones(count, dtype=bool)
@@ -276,7 +280,9 @@ def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> Chu
 def _evaluate_rows(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkResults:
     """Evaluate and cross-check rows one after the other."""
     accuracy, check = config.accuracy, config.cross_check
-    evaluator = RowEvaluator(opened.plans, accuracy.digits, accuracy.max_precision_bits)
+    evaluator = RowEvaluator(
+        opened.plans, accuracy.digits, accuracy.max_precision_bits, accuracy.seconds
+    )
     accepted: list[int] = []
     results = ChunkResults(opened.layout.columns(), accepted)
     sampled = [
@@ -295,7 +301,11 @@ def _evaluate_rows(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkR
             columns.append(written)
             if chosen[position]:
                 found = cross_check(
-                    computed, written, digits=check.digits, arithmetic=check.arithmetic
+                    computed,
+                    written,
+                    digits=check.digits,
+                    arithmetic=check.arithmetic,
+                    seconds=accuracy.seconds,
                 )
                 results.checks += [(position, computed.name, one) for one in found]
     return results

@@ -258,6 +258,17 @@ class AccuracyConfig(Section):
         le=1_000_000,
         description="an integer from 64 to 1000000",
     )
+    time_limit: ExactNumber = Field(
+        default=Decimal(600),
+        ge=0,
+        le=10**9,
+        description="seconds for each integral of a row and for its cross-check (0: none)",
+    )
+
+    @property
+    def seconds(self) -> float | None:
+        """The time limit, or None without one."""
+        return float(self.time_limit) or None
 
 
 class CrossCheckConfig(Section):

@@ -17,6 +17,7 @@ from loopint.core.errors import LoopintError
 from loopint.core.laurent import complex_ball
 from loopint.core.numbers import exact_complex, exact_real, float_with_bound, mpf_with_bound
 from loopint.core.precision import BITS_PER_DIGIT, working_precision
+from loopint.core.time_limit import TimeLimitError, time_limit
 from loopint.quadrature import integrate_feynman
 
 if TYPE_CHECKING:
@@ -114,6 +115,7 @@ def cross_check(
     *,
     digits: int,
     arithmetic: Literal["balls", "mpmath"],
+    seconds: float | None = None,
 ) -> list[Check]:
     """Integrate the Feynman representation and compare every order.
 
@@ -128,9 +130,14 @@ def cross_check(
     arithmetic
         "balls": both sides are enclosures and must overlap.  "mpmath": the difference must not
         exceed 10^-digits |value| plus the bound of the table and the error estimate.
+    seconds
+        The time limit of the quadrature.
     """
     try:
-        result = _integrated(computed.request, digits, arithmetic)
+        if computed.evaluation.timed_out:
+            raise TimeLimitError("nothing to compare: the evaluation reached its time limit")
+        with time_limit(seconds):
+            result = _integrated(computed.request, digits, arithmetic)
         with working_precision(128 + 2 * math.ceil(digits * BITS_PER_DIGIT)):
             return list(_compare(computed, table, result, digits))
     except LoopintError as error:

@@ -223,7 +223,9 @@ def _time_sample(config: RunConfig, opened: OpenedRun) -> tuple[float, float]:
         rows += block.cells()
 
     accuracy = config.accuracy
-    evaluator = RowEvaluator(opened.plans, accuracy.digits, accuracy.max_precision_bits)
+    evaluator = RowEvaluator(
+        opened.plans, accuracy.digits, accuracy.max_precision_bits, accuracy.seconds
+    )
 
     def evaluate() -> list[list[Computed]]:
         computed = []

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 from loopint.core.errors import InputError, LoopintError, MorePrecisionNeeded
 from loopint.core.numbers import imaginary_part, real_part, rounds_uniquely
+from loopint.core.time_limit import TimeLimitError, time_limit
 from loopint.integrals.registry import Evaluator
 
 if TYPE_CHECKING:
@@ -76,12 +77,21 @@ class RowEvaluator:
     digits, max_precision_bits
         See `loopint.integrals.registry.Evaluator`; on top of the digits the coefficients are proven
         far enough to have one nearest float64.
+    seconds
+        The time limit of each integral of a row; what exceeds it has status "timed_out".
     """
 
-    def __init__(self, plans: Sequence[IntegralPlan], digits: int, max_precision_bits: int) -> None:
+    def __init__(
+        self,
+        plans: Sequence[IntegralPlan],
+        digits: int,
+        max_precision_bits: int,
+        seconds: float | None = None,
+    ) -> None:
         self.plans = plans
         self.digits = digits
         self.max_precision_bits = max_precision_bits
+        self.seconds = seconds
         self._evaluators = [
             self._evaluator(plan.integral, plan.fixed_conventions)
             if plan.has_fixed_conventions
@@ -124,11 +134,14 @@ class RowEvaluator:
 
     def _evaluate(self, place: int, request: RowRequest) -> Evaluation:
         orders = request.integral.orders
+        evaluator = self._evaluators[place]
+        if evaluator is None:
+            evaluator = self._evaluator(request.integral, request.conventions)
         try:
-            evaluator = self._evaluators[place]
-            if evaluator is None:
-                evaluator = self._evaluator(request.integral, request.conventions)
-            return evaluator(request.point, lambda series: rounds_to_floats(series, orders))
+            with time_limit(self.seconds):
+                return evaluator(request.point, lambda series: rounds_to_floats(series, orders))
+        except TimeLimitError:
+            return evaluator.out_of_time(request.point)
         except LoopintError as error:
             reason = str(error)
         except MorePrecisionNeeded:

@@ -201,6 +201,7 @@ def exit_code(summary: dict[str, Any]) -> int:
     attention = (
         summary["rows_rejected"]
         or summary["results_below_digits"]
+        or summary["results_timed_out"]
         or summary["cross_check"]["disagrees"]
     )
     return 3 if attention else 0

@@ -54,8 +54,8 @@ COLUMN_MEANINGS = {
     "|error| <= 10^-digits |value|; null if the coefficient is exact",
     "region": "where the point lies, decided exactly; `_snapped` if it was moved there on request",
     "method": "how the integral was computed",
-    "status": "ok, or below_digits: max_precision_bits (or the range of float64) came first; "
-    "the bounds hold all the same",
+    "status": "ok; below_digits: max_precision_bits (or the range of float64) came first, "
+    "the bounds hold all the same; timed_out: time_limit came first, no number",
 }
 
 
@@ -118,7 +118,7 @@ def write_integral(computed: Computed, digits: int) -> WrittenIntegral:
         numbers,
         evaluation.region,
         evaluation.method,
-        "below_digits" if beyond else evaluation.status,
+        "below_digits" if beyond and not evaluation.timed_out else evaluation.status,
         evaluation.precision_bits,
     )
 

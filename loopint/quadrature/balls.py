@@ -31,6 +31,7 @@ from flint import acb, arb, fmpq
 from loopint.core.errors import MorePrecisionNeeded
 from loopint.core.numbers import Ball, ExactComplex
 from loopint.core.precision import current_bits
+from loopint.core.time_limit import check_time
 from loopint.quadrature.ball_bounds import bound_on_disc, logarithm
 from loopint.quadrature.endpoints import first_piece
 from loopint.quadrature.factors import Factor, has_singular_anchor, leg_factors
@@ -98,6 +99,7 @@ def _leg_integrals(leg: Leg, integrand: Integrand, *, is_real: bool) -> list[Bal
     stack = [(fmpq(0), fmpq(1))]
     pieces = 0
     while stack:
+        check_time()
         start, stop = stack.pop()
         pieces += 1
         if pieces > MAX_PIECES:

@@ -9,6 +9,7 @@ from __future__ import annotations
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
+from loopint.core.time_limit import check_time
 from loopint.quadrature.factors import has_singular_anchor, leg_factors
 from loopint.quadrature.mpmath_endpoints import first_piece
 from loopint.quadrature.mpmath_numbers import ROUNDING, Context, Estimate, logarithm, real
@@ -82,6 +83,7 @@ class _Evaluation:
         return function
 
     def _evaluate(self, s: Number) -> tuple[Number, Number]:
+        check_time()
         ctx, leg = self.ctx, self.leg
         u, weight = (leg.end * s * s, 2 * s * leg.end) if self.squared else (leg.end * s, leg.end)
         large_logarithm = ctx.zero

@@ -134,7 +134,8 @@ def _formulas(config: Mapping[str, Any]) -> list[Markup]:
 def _regions(summary: Mapping[str, Any]) -> Iterator[tuple[str, str, int, int]]:
     for name, entry in summary["integrals"].items():
         for region, statuses in entry["regions"].items():
-            yield name, region, statuses.get("ok", 0), statuses.get("below_digits", 0)
+            below = statuses.get("below_digits", 0) + statuses.get("timed_out", 0)
+            yield name, region, statuses.get("ok", 0), below
 
 
 def _described(entry: Mapping[str, Any], order_text: Any) -> dict[str, str]:  # noqa: ANN401
