@@ -264,7 +264,7 @@ class _Parser:
         exponent = _integer(node.right)
         if exponent is None or abs(exponent) > MAX_EXPONENT:
             raise InputError(
-                f"{self.shown(node)!r} has the exponent {self.shown(node.right)}; accepted: "
+                f"{self.shown(node)!r} has the exponent {self.shown(node.right)!r}; accepted: "
                 f"a written integer from -{MAX_EXPONENT} to {MAX_EXPONENT}"
             )
         base = self.compile(node.left, depth + 1)

@@ -286,6 +286,8 @@ def _parquet_files(path: Path) -> list[Path]:
             return files
         if not path.exists():
             raise ConfigError(f"{path} does not exist; {accepted}")
+        if not path.is_file():
+            raise ConfigError(f"{path} is no regular file; {accepted}")
     except OSError as error:
         raise ConfigError(f"{path} cannot be read: {error.strerror or error}") from None
     return [path]
@@ -387,11 +389,26 @@ def exact_cell(value: object) -> fmpq:
 
 def exact_rows(table: pa.Table, columns: Sequence[str]) -> Iterator[Mapping[str, Cell]]:
     """Yield, row by row, the exact value of each column, or the reason why there is none."""
-    exact = [[_cell(value) for value in table.column(name).to_pylist()] for name in columns]
+    exact = [[_cell(value) for value in _as_list(table.column(name))] for name in columns]
     if not columns:
         yield from ({} for _ in range(table.num_rows))
     for cells in zip(*exact, strict=True):
         yield dict(zip(columns, cells, strict=True))
+
+
+def _as_list(column: pa.ChunkedArray) -> list[object]:
+    """Return the values; a string that is not UTF-8 stays bytes, which are no number."""
+    try:
+        return list(column.to_pylist())
+    except UnicodeDecodeError:
+        return [_decoded(value) for value in column.cast(pa.large_binary()).to_pylist()]
+
+
+def _decoded(value: bytes | None) -> object:
+    try:
+        return None if value is None else value.decode()
+    except UnicodeDecodeError:
+        return value
 
 
 def _cell(value: object) -> Cell:

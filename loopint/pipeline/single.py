@@ -301,8 +301,9 @@ def _number(name: str, text: str) -> fmpq:
     try:
         return exact_real(text)
     except InputError:
+        shown = text if len(text) <= 60 else text[:57] + "..."
         raise InputError(
-            f"{_option(name)} {text!r} is not a number; accepted: a decimal or a rational, such as "
+            f"{_option(name)} {shown!r} is not a number; accepted: a decimal or a rational, such as "
             "0.25, 1e-3 or 1/4"
         ) from None
 

@@ -13,11 +13,13 @@ import numpy as np
 import pyarrow as pa
 import pyarrow.parquet as pq
 from flint import acb, arb
+from pydantic import ValidationError
 
 from loopint.core.laurent import complex_ball
 from loopint.core.precision import working_precision
 from loopint.pipeline.chunks import RowReader, open_run
 from loopint.pipeline.config import RunConfig
+from loopint.pipeline.config_messages import explain
 from loopint.pipeline.cross_check import DISAGREES, OK, cross_check
 from loopint.pipeline.errors import ConfigError
 from loopint.pipeline.evaluate import RowEvaluator, RowRejectedError
@@ -103,7 +105,10 @@ def verify_run(path: Path, *, rows: int = 20, seed: int = 1) -> Verification:
             _check_conventions(found, directory, manifest)
         if not found.findings:
             _evaluate_again(found, directory, manifest, config, rows, seed)
-    except (KeyError, TypeError, ValueError, AttributeError) as error:
+    except ValidationError as error:
+        reason = explain(error, manifest["config"], RunConfig)
+        raise ConfigError(f"{directory.manifest}: {reason}") from None
+    except (KeyError, TypeError, ValueError, AttributeError, IndexError) as error:
         raise ConfigError(
             f"{directory.manifest} is not a manifest of this version: {error!r}; accepted: a "
             "directory that loopint run wrote"

@@ -131,7 +131,7 @@ def _curves(
 ) -> tuple[Figure, list[str]]:
     """Draw both parts over the abscissa; without curves as dots."""
     x = _drawable(rows if scan is None else scan.abscissa)
-    thresholds = {} if scan is None else scan.thresholds
+    thresholds = {} if scan is None else {k: _drawable(t) for k, t in scan.thresholds.items()}
     marks = {name: np.unique(places[np.isfinite(places)]) for name, places in thresholds.items()}
     if sum(places.size for places in marks.values()) > MOST_MARKS:
         marks = {}
@@ -211,7 +211,7 @@ def _maps(drawn: Sequence[Coefficient], scan: Scan) -> Figure:
         _scale(axes, "x", x)
         _scale(axes, "y", y)
         limits = axes.get_xlim(), axes.get_ylim()
-        for name, places in scan.thresholds.items():
+        for name, places in ((k, _drawable(t)) for k, t in scan.thresholds.items()):
             heights, first = np.unique(y, return_index=True)
             line = Line2D(
                 places[first], heights, color="black", lw=1.3, ls=DASHES[name], label=name
