@@ -12,6 +12,8 @@ seconds or 2 GiB, is reported by the fuzzer with the bytes that caused it.
 from __future__ import annotations
 
 import argparse
+import contextlib
+import hashlib
 import importlib
 import json
 import shutil
@@ -87,12 +89,17 @@ def run_directory(data: bytes) -> None:
 
 
 def interpolant(data: bytes) -> None:
+    import loopint
     from loopint import load_interpolant
 
-    (FOLDER / "made.parquet").write_bytes(b"PAR1")
-    path = FOLDER / "made.json"
+    path = FOLDER / "interpolants" / "made.json"
+    with contextlib.suppress(ValueError, TypeError, KeyError, OSError):  # let it past the hash
+        content = json.loads(data)
+        table = (path.parent / content["table"]).read_bytes()
+        data = json.dumps(content | {"table_sha256": hashlib.sha256(table).hexdigest()}).encode()
     path.write_bytes(data)
-    load_interpolant(path)
+    made = load_interpolant(path)
+    made(made.orders[0], *([0.5] if isinstance(made, loopint.Interpolant) else [0.5, 1.0]))
 
 
 def _make_run(folder: Path) -> None:
@@ -147,10 +154,7 @@ def seeds(name: str) -> list[bytes]:
         _make_run(FOLDER / "run")
         return [(FOLDER / "run" / "manifest.json").read_bytes()]
     if name == "interpolant":
-        content = {"format": 2, "name": "made", "integral": "x", "orders": [0], "range": [0, 1]}
-        content |= {"variables": ["p_squared"], "threshold": [4.0, 0.0], "table": "made.parquet"}
-        content |= {"error_bounds": {"0": 1e-12}, "conventions": {}, "table_sha256": "0"}
-        return [json.dumps(content).encode()]
+        return _make_interpolants()
     texts = {
         "expression": ["(m_a + m_b)**2/3 - 1e-3", "`odd name` * -2.5", "((1))", "2**-64"],
         "formula": [
@@ -160,6 +164,17 @@ def seeds(name: str) -> list[bytes]:
         ],
     }
     return [text.encode() for text in texts[name]]
+
+
+def _make_interpolants() -> list[bytes]:
+    from loopint.interpolation.build import build_interpolants
+    from loopint.pipeline.config import InterpolationRunConfig, load_config_as
+
+    text = (Path(__file__).parents[1] / "configs" / "interpolate.toml").read_text()
+    path = FOLDER / "interpolate.toml"
+    path.write_text(text.replace("runs/interpolate", str(FOLDER / "interpolants")))
+    made = build_interpolants(load_config_as(InterpolationRunConfig, path))
+    return [one.files[0].read_bytes() for one in made]
 
 
 def _small_parquet() -> bytes:

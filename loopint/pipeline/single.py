@@ -303,8 +303,8 @@ def _number(name: str, text: str) -> fmpq:
     except InputError:
         shown = text if len(text) <= 60 else text[:57] + "..."
         raise InputError(
-            f"{_option(name)} {shown!r} is not a number; accepted: a decimal or a rational, such as "
-            "0.25, 1e-3 or 1/4"
+            f"{_option(name)} {shown!r} is not a number; accepted: a decimal or a rational, such "
+            "as 0.25, 1e-3 or 1/4"
         ) from None
 
 
