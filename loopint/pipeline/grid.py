@@ -138,6 +138,8 @@ def _check_target(path: Path, identity: str, overwrite: bool) -> None:
         return
     try:
         metadata = pq.read_schema(path).metadata or {}
+    except MemoryError:
+        raise
     except (OSError, pa.ArrowException):
         metadata = {}
     if metadata.get(b"loopint_grid") != identity.encode():

@@ -205,6 +205,8 @@ class _Cursor:
             # partitioning is the business of the directory, not of a single file
             with pq.ParquetFile(self.part.path, buffer_size=BUFFER_BYTES) as file:
                 yield from file.iter_batches(BATCH_ROWS, row_groups=groups, columns=self.names)
+        except MemoryError:  # Arrow's own is an ArrowException too
+            raise
         except (pa.ArrowException, OSError) as error:
             raise ConfigError(
                 f"{self.part.path} cannot be read: {_first_line(error)}; "
@@ -306,6 +308,8 @@ def _inspect(path: Path) -> tuple[pa.Schema, PointsFile]:
             groups = tuple(
                 metadata.row_group(index).num_rows for index in range(metadata.num_row_groups)
             )
+    except MemoryError:
+        raise
     except (pa.ArrowException, OSError, ValueError) as error:
         raise ConfigError(
             f"{path} is not a readable Parquet file ({_first_line(error)}); accepted: Parquet"

@@ -113,6 +113,8 @@ def verify_run(path: Path, *, rows: int = 20, seed: int = 1) -> Verification:
             f"{directory.manifest} is not a manifest of this version: {error!r}; accepted: a "
             "directory that loopint run wrote"
         ) from None
+    except MemoryError:
+        raise
     except (OSError, pa.ArrowException) as error:
         found.findings.append(f"a file cannot be read: {error}")
     return found
