@@ -331,6 +331,17 @@ def test_the_formula_follows_the_conventions(tmp_path):
     assert "A(n)" not in page.text
 
 
+def test_slowest_evaluations_and_sources(tmp_path):
+    dotted = bubble(powers=[2, 1]).replace('name = "b"', 'name = "dotted"')
+    page = Page.of(run_points(tmp_path, {"s": [1.0, 2.0], "m": [1.0, 1.0]}, bubble()))
+    assert "Slowest evaluations" in page.text
+    assert "hep-th/9606018" not in page.text
+    (tmp_path / "more").mkdir()
+    page = Page.of(run_points(tmp_path / "more", {"s": [1.0, 2.0], "m": [1.0, 1.0]}, dotted))
+    assert "hep-th/9606018" in page.text  # recurrences for the dot
+    assert "Boos" not in page.text
+
+
 def test_coefficients_that_are_exact_need_no_histogram(tmp_path):
     text = bubble(orders=[-1, -1])  # the pole is 1
     page = Page.of(run_points(tmp_path, {"s": [1.0, 2.0], "m": [1.0, 1.0]}, text))

@@ -90,6 +90,10 @@ def test_summary_and_manifest(reference):
     directory, contents = reference
     summary = json.loads((directory / "out" / "summary.json").read_text())
     assert summary["rows_in"] == summary["rows_in_table"] + summary["rows_rejected"] == ROWS
+    seconds = [found["seconds"] for found in summary["slowest"]]
+    assert len(seconds) == 5
+    assert seconds == sorted(seconds, reverse=True)
+    assert all(0 <= found["row"] < ROWS for found in summary["slowest"])
     for entry in summary["integrals"].values():
         assert sum(n for by in entry["regions"].values() for n in by.values()) == ROWS
     checks = pq.read_table(directory / "out" / "cross_check.parquet")

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+import heapq
 from collections import Counter
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
-from loopint.pipeline.chunks import NAMED_DISAGREEMENTS, smallest
+from loopint.pipeline.chunks import NAMED_DISAGREEMENTS, SLOWEST, smallest
 
 if TYPE_CHECKING:
     from collections.abc import Iterable
@@ -29,6 +30,7 @@ class Account:
         self._records: dict[int, ChunkRecord] = {}
         self._precision_bits = 0
         self._disagreements: list[tuple[int, str, int]] = []
+        self._slowest: list[tuple[float, int, str]] = []
 
     def add(self, record: ChunkRecord) -> None:
         """Add the record of one finished chunk."""
@@ -38,8 +40,16 @@ class Account:
             account.add(name, record)
         named = self._disagreements + [(row, name, k) for row, name, k in record.disagreements]
         self._disagreements = sorted(named, key=lambda found: found[0])[:NAMED_DISAGREEMENTS]
+        slowest = [(seconds, row, name) for seconds, row, name in record.slowest]
+        self._slowest = heapq.nlargest(SLOWEST, self._slowest + slowest)
         self._records[record.index] = replace(
-            record, counts={}, worst_digits={}, checks={}, worst_agreement={}, disagreements=[]
+            record,
+            counts={},
+            worst_digits={},
+            checks={},
+            worst_agreement={},
+            disagreements=[],
+            slowest=[],
         )
 
     def records(self) -> list[ChunkRecord]:
@@ -73,6 +83,10 @@ class Account:
             "table_lines": sum(record.table_lines for record in records),
             "worst_digits": smallest(*(entry["worst_digits"] for entry in integrals.values())),
             "precision_bits": self._precision_bits,
+            "slowest": [
+                {"row": row, "integral": name, "seconds": float(f"{seconds:.3g}")}
+                for seconds, row, name in self._slowest
+            ],
             "integrals": integrals,
             "cross_check": {
                 "coefficients": sum(checks.values()),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import heapq
 import platform
 from collections import Counter
 from dataclasses import dataclass, field, fields
@@ -43,6 +44,7 @@ if TYPE_CHECKING:
 PlacedCheck: TypeAlias = tuple[int, str, Check]  # position in the chunk, integral, comparison
 
 NAMED_DISAGREEMENTS = 20  # so many are named, the others only counted
+SLOWEST = 5
 FEWEST_ROWS, MOST_ROWS = 250, 8000
 MANY_DIGITS, MOST_ROWS_WITH_MANY_DIGITS = 100, 1000  # their decimals take memory
 MOST_ROWS_IN_DOUBLES = 125_000
@@ -209,12 +211,15 @@ class ChunkResults:
         Position and reason of the other rows.
     checks
         The cross-checks, in the order of the rows.
+    times
+        Seconds, position and integral of what was evaluated on its own.
     """
 
     integrals: list[IntegralColumns]
     accepted: list[int] | NDArray[np.intp] = field(default_factory=list)
     refused: list[tuple[int, RowRejectedError]] = field(default_factory=list)
     checks: list[PlacedCheck] = field(default_factory=list)
+    times: list[tuple[float, int, str]] = field(default_factory=list)
 
 
 def evaluate_block(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkResults:
@@ -256,6 +261,7 @@ def _evaluate_columns(config: RunConfig, opened: OpenedRun, block: Block) -> Chu
             results.refused.append((position, error))
             continue
         for place, computed in row.items():
+            results.times.append((computed.seconds, position, computed.name))
             if found[place].done[position]:
                 written = found[place].written(position)
             else:
@@ -299,6 +305,7 @@ def _evaluate_rows(config: RunConfig, opened: OpenedRun, block: Block) -> ChunkR
         for computed, columns, chosen in zip(row, results.integrals, sampled, strict=True):
             written = write_integral(computed, accuracy.digits)
             columns.append(written)
+            results.times.append((computed.seconds, position, computed.name))
             if chosen[position]:
                 found = cross_check(
                     computed,
@@ -362,6 +369,10 @@ class ChunkEvaluator:
             counts={one.name: one.counts() for one in results.integrals},
             worst_digits={one.name: one.worst_digits() for one in results.integrals},
             precision_bits=max(one.precision_bits for one in results.integrals),
+            slowest=[
+                (seconds, start + position, name)
+                for seconds, position, name in heapq.nlargest(SLOWEST, results.times)
+            ],
             **self._count_checks(start, results.checks),
         )
         self.directory.commit(record)

@@ -70,6 +70,7 @@ class ChunkRecord:
     checks: dict[str, dict[str, int]] = field(default_factory=dict)
     worst_agreement: dict[str, int | None] = field(default_factory=dict)
     disagreements: list[tuple[int, str, int]] = field(default_factory=list)
+    slowest: list[tuple[float, int, str]] = field(default_factory=list)
 
 
 @contextmanager

@@ -37,13 +37,15 @@ KINEMATICS = (
     *("p_squared", "m_squared", "m", "width"),
     *("m1_squared", "m1", "width1", "m2_squared", "m2", "width2"),
 )
-SOURCES = (
-    "Gauss hypergeometric function: DLMF chapter 15",
-    "E. Boos, A. Davydychev, Theor. Math. Phys. 89 (1991) 1052",
+GAUSS = "Gauss hypergeometric function: DLMF chapter 15"
+TWO_MASSES = (
+    "G. 't Hooft, M. Veltman, Nucl. Phys. B153 (1979) 365",
     "A. Davydychev, hep-ph/9910224",
+)
+ONE_MASS = "E. Boos, A. Davydychev, Theor. Math. Phys. 89 (1991) 1052"
+RECURRENCES = (
     "K. Chetyrkin, F. Tkachov, Nucl. Phys. B192 (1981) 159",
     "O. Tarasov, hep-th/9606018",
-    "G. 't Hooft, M. Veltman, Nucl. Phys. B153 (1979) 365",
 )
 
 
@@ -93,11 +95,27 @@ def render(data: RunData) -> str:
         measure=MEASURES[config["conventions"]["measure"]],
         regions=list(_regions(data.summary)),
         integrals=[_described(entry, order_text) for entry in config["integral"]],
-        sources=SOURCES,
+        sources=_sources(config),
         key=config["points"].get("key") or "row",
         title=data.summary["title"] or data.directory.name,
         has_decimals=data.summary["digits"] > FLOAT_DIGITS,
     )
+
+
+def _sources(config: Mapping[str, Any]) -> list[str]:
+    """Return the publications that the integrals of the run rest on."""
+    entries = [entry for entry in config["integral"] if entry["family"] != "tadpole"]
+    found = [GAUSS] if entries else ["Gamma function: DLMF chapter 5"]
+    if any(entry["family"] == "bubble" for entry in entries):
+        found += TWO_MASSES
+    if any(entry["family"] == "propagator" for entry in entries):
+        found.append(ONE_MASS)
+    if any(
+        entry["powers"] != [1, 1] or entry["dimension"] != 4 or entry.get("derivatives")
+        for entry in entries
+    ):
+        found += RECURRENCES
+    return found
 
 
 def _figures(data: RunData) -> Iterator[tuple[str, Drawn]]:
