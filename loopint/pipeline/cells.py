@@ -60,8 +60,8 @@ def _decimals(column: pa.ChunkedArray) -> Rounded:
     if not rows:
         return unknown
     words = np.frombuffer(array.buffers()[1], dtype="<i8")
-    words = words[2 * array.offset : 2 * (array.offset + rows)].reshape(rows, 2)
-    low, high = words[:, 0], words[:, 1]
+    words = words[2 * array.offset : 2 * (array.offset + rows)]
+    low, high = words[::2], words[1::2]
     fits = high == (low >> 63)
     unscaled = _integers(low).where(fits & ~_nulls(column))
     return unscaled / Rounded.constant(fmpq(10) ** kind.scale, rows)
