@@ -492,7 +492,7 @@ def test_convergent_dots_on_a_massive_line_are_accepted():
         {"digits": 0},
         {"digits": 2.5},
         {"dimension": 0},
-        {"dimension": 13},
+        {"dimension": 21},
         {"dimension": 4.0},
         {"powers": (1,)},
         {"powers": (1, 1.0)},

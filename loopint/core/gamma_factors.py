@@ -24,7 +24,7 @@ from flint import arb, fmpq
 
 from loopint.core.errors import UnregulatedError
 from loopint.core.laurent import BallSeries, convolve
-from loopint.core.numbers import ZERO
+from loopint.core.numbers import ZERO, ExactComplex
 from loopint.core.precision import current_bits
 
 Powers = tuple[tuple[fmpq, int], ...]
@@ -148,6 +148,21 @@ class EpsilonFactor:
     def series(self, terms: int) -> BallSeries:
         """Expand to `terms` orders, starting at `lowest_order`, at the working precision."""
         return _expand(self, terms, current_bits())
+
+    def series_times(self, exact: list[ExactComplex]) -> BallSeries:
+        """Expand the factor times a power series with exact coefficients, to as many orders.
+
+        What is rational in the factor is multiplied exactly, so that what cancels is exactly zero.
+        """
+        terms = len(exact)
+        rational = _rational_part(self, terms)
+        product = [
+            sum((exact[j].scaled(rational[n - j]) for j in range(n + 1)), start=ExactComplex(ZERO))
+            for n in range(terms)
+        ]
+        rest = replace(self, linear=()).series(terms)
+        coefficients = convolve([c.ball() for c in product], rest.coefficients, terms)
+        return BallSeries(self.lowest_order, coefficients)
 
     def series_through(self, highest: int) -> BallSeries:
         """Expand through order `highest`; exactly zero if that is below the lowest order."""

@@ -21,11 +21,12 @@ from loopint.core.errors import UnsupportedIntegralError
 from loopint.core.gamma_factors import EpsilonFactor
 from loopint.core.kinematics import Region, TwoPoint
 from loopint.core.laurent import BallSeries
-from loopint.core.numbers import Ball, ExactComplex
+from loopint.core.numbers import Ball
 from loopint.core.precision import current_bits
 from loopint.integrals.logarithms import logarithm_integral
-from loopint.integrals.moments import FeynmanMoment, ultraviolet_moment
+from loopint.integrals.moments import FeynmanMoment, kummer_line, ultraviolet_moment
 from loopint.integrals.numerators import numerator_series
+from loopint.integrals.vanishing import leading_order_vanishes
 
 MAX_POWER = 12
 ISOLATED = "_isolated"
@@ -52,7 +53,7 @@ def method(point: TwoPoint, powers: tuple[int, ...], dimension: int) -> str:  # 
         return "gamma"
     if point.p_squared == 0 or point.kallen.is_zero:
         return "elementary"
-    return "hypergeometric"
+    return "gamma" if kummer_line(point, n1 - 1, n2 - 1) else "hypergeometric"
 
 
 def region(point: TwoPoint, powers: tuple[int, ...], dimension: int) -> str:
@@ -151,7 +152,19 @@ def _clean(
         known[-1] = lead
     if highest < lowest:
         return BallSeries.zero(highest)
+    if lowest == 0 and result[0].contains(0) and _finite_part_vanishes(point, powers, dimension):
+        known[0] = arb(0)
     return BallSeries(lowest, [known.get(k, result[k]) for k in range(lowest, highest + 1)])
+
+
+def _finite_part_vanishes(point: TwoPoint, powers: tuple[int, int], dimension: int) -> bool:
+    """Whether the coefficient of eps^0 is exactly zero, there being no pole."""
+    if not point.p_squared or point.kallen.is_zero:
+        return False
+    lines = zip((point.m1_squared, point.m2_squared), powers, strict=True)
+    if dimension % 2 == 0 and any(m.is_zero and 2 * n >= dimension for m, n in lines):
+        return False  # an infrared residue that vanishes: eps^0 is the next coefficient
+    return leading_order_vanishes(point, *powers, dimension)
 
 
 def _has_pole(point: TwoPoint, n1: int, n2: int, dimension: int) -> bool:
@@ -168,28 +181,7 @@ def _has_pole(point: TwoPoint, n1: int, n2: int, dimension: int) -> bool:
         if point.region is Region.ON_SHELL:
             # Gamma(-s) Gamma(massive+2s)/Gamma(d-N)
             return total < dimension <= 2 * massless + massive
-        m_squared = point.m2_squared if point.m1_squared.is_zero else point.m1_squared
         if even and 2 * massless >= dimension:
-            return not _infrared_residue_vanishes(
-                point.p_squared, m_squared, massless, massive, dimension
-            )
+            return not leading_order_vanishes(point, n1, n2, dimension)
         return False
     return point.region is Region.THRESHOLD and not even and total < dimension < 2 * total
-
-
-def _infrared_residue_vanishes(
-    p_squared: fmpq, m_squared: ExactComplex, massless: int, massive: int, dimension: int
-) -> bool:
-    """Whether the residue on a massless line is exactly zero at this point.
-
-    It is proportional to 2F1(N-d0/2, n; d0/2; z), z = p^2/m^2, which for n >= d0/2 is a power of
-    1-z times the polynomial 2F1(d0-N, d0/2-n; d0/2; z) (Euler, DLMF 15.8.1).
-    """
-    half, total = dimension // 2, massless + massive
-    z = ExactComplex(p_squared) / m_squared
-    term = value = ExactComplex(fmpq(1))
-    for j in range(massless - half):
-        ratio = fmpq((dimension - total + j) * (half - massless + j), (half + j) * (1 + j))
-        term = (term * z).scaled(ratio)
-        value = value + term
-    return value.is_zero

@@ -124,9 +124,17 @@ class FeynmanMoment:
         if m1.is_zero and m2.is_zero:
             return self._both_massless(point)
         if point.p_squared == 0:
-            return self._constant(m1) if m1 == m2 else self._linear(m1, m2)
+            if m1 == m2:
+                return self._constant(m1)
+            return (
+                self._one_massless(point, 1) if m1.is_zero or m2.is_zero else self._linear(m1, m2)
+            )
         if point.kallen.is_zero:
-            return self._square(point)
+            if m1.is_zero or m2.is_zero:
+                return self._one_massless(point, 2)
+            return self._equal_masses(m1) if m1 == m2 else self._square(point)
+        if kummer_line(point, self.a, self.b) is not None:
+            return self._kummer(point)
         return self._recurrence(point)
 
     def _both_massless(self, point: TwoPoint) -> BallSeries:
@@ -141,6 +149,64 @@ class FeynmanMoment:
         beta = fmpq(factorial(a) * factorial(b), factorial(a + b + 1))
         bare, two = self.without_two
         return times_mass_power(m_squared, bare, self.s0, two).scaled(beta)
+
+    def _one_massless(self, point: TwoPoint, zeros: int) -> BallSeries:
+        """Integrate where Q = m^2 y^zeros, y vanishing at the massless end: Euler's beta integral.
+
+        One massless line at p^2 = 0 (zeros = 1) or on shell (zeros = 2).
+        """
+        gamma, s0 = EpsilonFactor.gamma, self.s0
+        massless, massive, m = self.b, self.a, point.m2_squared
+        if point.m2_squared.is_zero:
+            massless, massive, m = self.a, self.b, point.m1_squared
+        factor = self.prefactor * gamma(massless + 1 + zeros * s0, -zeros) * gamma(massive + 1, 0)
+        factor = factor / gamma(massless + massive + 2 + zeros * s0, -zeros)
+        factor, two = factor.split_two()
+        return times_mass_power(m, self._expanded(factor), s0, two)
+
+    def _kummer(self, point: TwoPoint) -> BallSeries:
+        """Integrate at p^2 = -m^2, one line massless and the power of the other one.
+
+        The Gauss function of Boos and Davydychev (`loopint.integrals.propagator`) is Kummer's,
+        2F1(a, b; 1+a-b; -1) (DLMF 15.4.26): with n the massless power,
+        Gamma(1+s) Gamma(1+n/2) / (n Gamma(1+n/2+s)) (m^2)^s.
+        """
+        m = kummer_line(point, self.a, self.b)
+        assert m is not None
+        gamma, s0, n = EpsilonFactor.gamma, self.s0, self.a + self.b + 1
+        top = self.prefactor * gamma(1 + s0, -1) * gamma(1 + fmpq(n, 2), 0)
+        factor = top / gamma(1 + fmpq(n, 2) + s0, -1) / EpsilonFactor.constant(n)
+        factor, two = factor.split_two()
+        return times_mass_power(m, self._expanded(factor), s0, two)
+
+    def _equal_masses(self, m_squared: ExactComplex) -> BallSeries:
+        """Integrate at p^2 = 4 m^2, where Q = 4 m^2 y^2 with y = x - 1/2.
+
+        As in `_square`, but both ends have the same power: what is beside it is rational in eps.
+        """
+        half = fmpq(1, 2)
+        x0, unit = ExactComplex(half), ONE
+        coefficients = _product_of_powers([x0, unit], self.a, [x0, -unit], self.b)
+        pole: fmpq | None = None
+        terms = self.highest - self.prefactor.lowest_order + 1
+        if terms <= 0:
+            return BallSeries.zero(self.highest)
+        regular = [fmpq(0)] * terms
+        for j in range(0, len(coefficients), 2):
+            exponent = j + 1 + 2 * self.s0
+            c = 2 * coefficients[j].re * half ** (j + 1)
+            if exponent == 0:
+                pole = -c / 2
+                continue
+            for n in range(terms):  # c / (exponent - 2 eps)
+                regular[n] += c * fmpq(2) ** n / exponent ** (n + 1)
+        factor, two = self.prefactor.split_two()
+        if pole is None:
+            exact, shift = regular, 0
+        else:
+            exact, shift = [pole, *regular[:-1]], -1
+        series = factor.series_times([ExactComplex(c) for c in exact]).shifted(shift)
+        return times_mass_power(m_squared, series, self.s0, two)
 
     def _linear(self, m1: ExactComplex, m2: ExactComplex) -> BallSeries:
         """Use y = Q as variable: x = (y - m2^2)/delta, 1-x = (m1^2 - y)/delta."""
@@ -203,7 +269,31 @@ class FeynmanMoment:
                 part = part.scaled(self._p_squared_power(point))
             total = part if total is None else total + part
         assert total is not None
+        if not point.snapped and self._leading_square_vanishes(point):
+            lead = total.lowest
+            total = BallSeries(lead, [arb(0), *total.coefficients[1:]])
         return total.map(real_part) if point.masses_are_real else total
+
+    def _leading_square_vanishes(self, point: TwoPoint) -> bool:
+        """Whether the sum of `_square` at eps = 0, p^2 to a power times a rational, is zero."""
+        half = fmpq(1, 2)
+        x0 = ExactComplex(half) - (point.m1_squared - point.m2_squared).scaled(
+            half / point.p_squared
+        )
+        total = ExactComplex(fmpq(0))
+        ends = ((point.m1_squared, ONE - x0, 1), (point.m2_squared, -x0, -1))
+        for j, c in enumerate(_product_of_powers([x0, ONE], self.a, [ONE - x0, -ONE], self.b)):
+            exponent = j + 1 + 2 * self.s0
+            if c.is_zero:
+                continue
+            if exponent == 0:
+                return False
+            for m, length, sign in ends:
+                # length^(j+1) (m^2)^s0, where m = +-length sqrt(p^2)
+                root = self._sign_of_root(point, m, length.ball())
+                power = _integer_power(length, int(exponent.p))
+                total = total + (c * power).scaled(sign * root / exponent)
+        return total.is_zero
 
     def _around_double_root(self, point: TwoPoint) -> tuple[Ball, Ball, list[Ball]]:
         """Return 1-x0, -x0 and the coefficients of x^a (1-x)^b in powers of x - x0."""
@@ -263,6 +353,22 @@ class FeynmanMoment:
         if m_squared.is_zero:
             return None
         return times_mass_power(m_squared, self.bare, self.s0 + 1)
+
+
+def kummer_line(point: TwoPoint, a: int, b: int) -> ExactComplex | None:
+    """Return m^2 if p^2 = -m^2, the other line is massless and m has the power one."""
+    m1, m2 = point.m1_squared, point.m2_squared
+    m, raised = (m2, b) if m1.is_zero else (m1, a)
+    if raised or not (m1.is_zero or m2.is_zero) or m != ExactComplex(-point.p_squared):
+        return None
+    return m
+
+
+def _integer_power(base: ExactComplex, exponent: int) -> ExactComplex:
+    result = ONE
+    for _ in range(abs(exponent)):
+        result = result * base
+    return result if exponent >= 0 else ONE / result
 
 
 def _square_root(x: arb) -> Ball:

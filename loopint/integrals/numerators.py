@@ -66,7 +66,7 @@ def numerator_series(
     if terms <= 0:
         return BallSeries.zero(highest)
     exact = _sum_of_tadpoles(point, power, numerator, dimension, terms)
-    series = factor.series(terms) * BallSeries(0, [c.ball() for c in exact])
+    series = factor.series_times(exact)
     return times_mass_exponent(point.m1_squared, series, half - power)
 
 

@@ -6,6 +6,7 @@ from typing import TYPE_CHECKING, NamedTuple
 
 from loopint.core.errors import InputError, MorePrecisionNeeded
 from loopint.core.laurent import BallSeries, LaurentSeries, worst_accuracy_bits
+from loopint.core.numbers import accuracy_bits
 from loopint.core.precision import bits_for_digits, round_up_to_word, working_precision
 from loopint.core.time_limit import check_time
 
@@ -22,9 +23,9 @@ FLOAT_BITS = 58  # a float64 and a few bits to decide how it rounds
 class Evaluation(NamedTuple):
     """One integral at one point: proven balls, and how they were obtained.
 
-    `proven` is False when `max_precision_bits` was reached before the digits asked for; the
-    balls still hold the true values.  `timed_out` says that a time limit came first: the balls are
-    then NaN.
+    `proven` is False when `max_precision_bits` was reached before the digits asked for, or when a
+    coefficient could not be told from zero; the balls still hold the true values.  `timed_out` says
+    that a time limit came first: the balls are then NaN.
     """
 
     series: BallSeries
@@ -75,6 +76,7 @@ def prove(
     digits: int,
     max_bits: int,
     accept: Callable[[BallSeries], bool] | None = None,
+    hopeless_bits: Callable[[], int] | None = None,
 ) -> tuple[BallSeries, int, bool]:
     """Evaluate at rising precision until every order has `digits` proven digits.
 
@@ -89,11 +91,14 @@ def prove(
     accept
         A further condition on the result, such as unique rounding to float64.  It is tried at
         most four times and never turns a proven result into a failure.
+    hopeless_bits
+        From this precision on a coefficient that is still not told from zero is left at its bound:
+        it is zero, and no precision proves a relative accuracy of zero.
 
     Returns
     -------
     series, bits, proven
-        `proven` is False if the cap came first.
+        `proven` is False if the cap, or `hopeless_bits`, came first.
     """
     needed = bits_for_digits(digits)
     start = needed if accept is None else max(needed, FLOAT_BITS)  # the wish is one of floats
@@ -117,7 +122,22 @@ def prove(
                     wishes += 1
                 elif accuracy > 0:
                     missing = needed - accuracy
+                elif (
+                    hopeless_bits is not None
+                    and bits >= hopeless_bits()
+                    and _only_zeros_miss(series, orders, needed)
+                ):
+                    return series, bits, False
         if bits >= max_bits:
             assert series is not None
             return series, bits, False
         bits = min(round_up_to_word(bits + missing + 8), max_bits)
+
+
+def _only_zeros_miss(series: BallSeries, orders: tuple[int, int], needed: int) -> bool:
+    """Whether every coefficient without the accuracy needed is one that may be zero."""
+    for k in range(max(orders[0], series.lowest), orders[1] + 1):
+        bits = accuracy_bits(series[k])
+        if bits is not None and bits < needed and not series[k].contains(0):
+            return False
+    return True

@@ -14,6 +14,7 @@ from loopint.core.kinematics import OnePoint, TwoPoint
 from loopint.core.laurent import BallSeries, check_orders
 from loopint.core.lazy import lazy
 from loopint.core.numbers import Ball, exact_real
+from loopint.core.precision import bits_for_digits
 from loopint.integrals import bubble, propagator, tadpole
 from loopint.integrals.derivatives import (
     ONE_POINT_VARIABLES,
@@ -237,6 +238,7 @@ class Evaluator:
             self.digits,
             self.max_precision_bits,
             accept,
+            lambda: self._hopeless_bits(reduced),
         )
         region, method = _region_and_method(self.family, integral, point)
         return Evaluation(series, integral.orders, self.digits, region, method, bits, proven)
@@ -249,6 +251,17 @@ class Evaluator:
         return Evaluation(
             series, self.integral.orders, self.digits, region, method, 0, False, timed_out=True
         )
+
+    def _hopeless_bits(self, point: Point) -> int:
+        """Return a precision at which a coefficient made of such numbers is zero if it looks so.
+
+        Cancellations are as deep as the numbers are long, times the degree of the expressions: for
+        p^2 = 10^-300 and m^2 = 10^300 thousands of bits, for p^2 = 2 and m^2 = 1 a few.
+        """
+        term = self.term
+        degree = term.dimension + 2 * sum(abs(int(_at_zero(n).constant.p)) for n in term.powers)
+        length = sum(int(x.p).bit_length() + int(x.q).bit_length() for x in _numbers(point))
+        return 512 + 4 * bits_for_digits(self.digits) + 2 * degree * length
 
     def _series(self, point: Point) -> BallSeries:
         """Expand at the working precision; the point is in units of mu^2."""
@@ -297,6 +310,13 @@ def _region_and_method(family: Family, integral: Integral, point: Point) -> tupl
         if term.has_no_limit(point) and not region.endswith(bubble.ISOLATED):
             region += bubble.ISOLATED
     return region + ("_snapped" if point.snapped else ""), method
+
+
+def _numbers(point: Point) -> list[fmpq]:
+    if isinstance(point, OnePoint):
+        return [point.m_squared.re, point.m_squared.im]
+    masses = (point.m1_squared, point.m2_squared)
+    return [point.p_squared, *(m.re for m in masses), *(m.im for m in masses)]
 
 
 def _at_zero(power: int | EpsilonLinear) -> EpsilonLinear:

@@ -182,6 +182,8 @@ def _local(factor: Factor, piece: _Piece) -> _LocalFactor:
 
 def _add_piece(sums: list[Ball], factors: tuple[Factor, ...], piece: _Piece) -> None:
     """Add the Gauss-Legendre sums with their error bounds."""
+    if not sums:  # nothing above the pole of a singular end was asked for
+        return
     half = piece.half
     is_real = isinstance(half, arb)
     nodes, errors = _error_bounds(factors, piece, len(sums))

@@ -54,7 +54,7 @@ ArithmeticName: TypeAlias = Literal["balls", "mpmath"]
 GUARD_BITS = 20
 MARGIN_BITS = 32
 ATTEMPTS = 5
-DIMENSIONS = range(1, 13)
+DIMENSIONS = range(1, 21)  # four derivatives with respect to p^2 raise 12 to 20
 
 
 @dataclass(frozen=True)
@@ -109,7 +109,7 @@ def integrate_feynman(
         One for a `OnePoint`, two for a `TwoPoint`; each is an integer n, or a pair (n, a) meaning
         n + a eps with a rational a.
     dimension
-        d0 in d = d0 - 2 eps, from 1 to 12.
+        d0 in d = d0 - 2 eps, from 1 to 20.
     orders
         Inclusive range (lowest, highest) of powers of epsilon.
     conventions
@@ -164,7 +164,7 @@ def _parse(point: OnePoint | TwoPoint, powers: tuple[Power, ...]) -> tuple[Epsil
 
 def _check(task: Representation, digits: int) -> None:
     if type(task.dimension) is not int or task.dimension not in DIMENSIONS:
-        raise InputError(f"dimension = {task.dimension!r}; accepted: an integer from 1 to 12")
+        raise InputError(f"dimension = {task.dimension!r}; accepted: an integer from 1 to 20")
     if type(digits) is not int or digits < 1:
         raise InputError(f"digits = {digits!r}; accepted: an integer of at least 1")
 
