@@ -126,3 +126,37 @@ def test_momentum_derivatives_in_the_highest_dimension() -> None:
     ends = [loopint.propagator(3 + s, 1, 2, digits=30, **arguments)[0]
             for s in (Fraction(1, 10**6), -Fraction(1, 10**6))]  # fmt: skip
     assert abs((ends[0] - ends[1]) * 500_000 - slope[0]) < 1e-6 * abs(slope[0])
+
+
+def test_a_pole_of_a_singular_end_that_vanishes() -> None:
+    """With nu2 = -2 + eps/2 the pole is a polynomial in p^2/m^2 with a zero at -4; any mu^2."""
+    powers, arguments = ((2, 1), (-2, "1/2")), {"mu_squared": "0.3", "orders": (-1, 0)}
+    series = loopint.propagator(-4, 1, 1, powers, digits=10, **arguments)
+    assert (series.status, series.method) == ("ok", "quadrature")
+    assert series[-1] == 0
+    assert series.bounds[-1] == 0
+    near = [loopint.propagator(p, 1, 1, powers, digits=10, **arguments)[-1]
+            for p in ("-4.001", "-3.999")]  # fmt: skip
+    assert near[0].real * near[1].real < 0
+    assert abs(near[0] + near[1]) < abs(near[0]) / 100
+
+
+@pytest.mark.parametrize(
+    "kinematics", [(3, 1, 2), (-2, 5, 1), (3, (1, -1), 2), (4, 0, 3), (2, 0, 2)]
+)
+@pytest.mark.parametrize(
+    "powers", [((-1, 1), (2, 0)), ((-2, "1/2"), (-1, 2)), ((0, 1), (-3, "1/3"))]
+)
+def test_rational_poles_are_in_the_balls(kinematics: tuple[object, ...], powers: object) -> None:
+    """The exact pole against mpmath's expansion at the singular ends."""
+    point = TwoPoint(exact_real(kinematics[0]), *(exact_complex(m) for m in kinematics[1:]))
+    exact = tuple((n, Fraction(a)) for n, a in powers)
+    for dimension in (4, 6):
+        balls, other = (
+            integrate_feynman(point, exact, dimension, (-3, 1), Conventions(), digits=12,
+                              arithmetic=arithmetic)
+            for arithmetic in ("balls", "mpmath")
+        )  # fmt: skip
+        for k in balls.values:
+            gap = abs(balls.values[k] - other.values[k])
+            assert gap <= balls.errors[k] + 10 * other.errors[k] + abs(balls.values[k]) * 1e-11

@@ -41,6 +41,7 @@ from loopint.quadrature.exponents import Power, parse_power
 from loopint.quadrature.paths import build_path, normalisation, resolve_on_shell
 from loopint.quadrature.prefactor import scalar_prefactor
 from loopint.quadrature.representation import Representation
+from loopint.quadrature.residues import exact_pole
 
 if TYPE_CHECKING:
     from collections.abc import Mapping, Sequence
@@ -230,6 +231,8 @@ def _ball_factors(task: Representation) -> tuple[list[Ball], list[Ball]]:
         scaled = point.scaled(1 / scale.re)
         moments = balls.integrate(build_path(scaled, balls.BALLS), task.integrand)
         known = _exact_moment(scaled, task.powers, exponent.constant)
+        if task.integrand_lowest == -1:
+            known = exact_pole(task.integrand, scaled)
         if known is not None:
             moments[0] = known.ball()
     mu = task.conventions.mu_squared
