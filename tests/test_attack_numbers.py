@@ -160,3 +160,20 @@ def test_rational_poles_are_in_the_balls(kinematics: tuple[object, ...], powers:
         for k in balls.values:
             gap = abs(balls.values[k] - other.values[k])
             assert gap <= balls.errors[k] + 10 * other.errors[k] + abs(balls.values[k]) * 1e-11
+
+
+@pytest.mark.parametrize("powers", [(2, 2), (5, 1), (10, 7), (7, 10)])
+def test_near_on_shell_whichever_line_is_massless(powers: tuple[int, int]) -> None:
+    """The recurrence starts where it is stable: 64 bits instead of thousands, one value."""
+    p = 3 + Fraction(1, 10**90)
+    one = loopint.bubble(p, 3, 0, powers, dimension=6, orders=(-1, 1), digits=10)
+    two = loopint.bubble(p, 0, 3, powers[::-1], dimension=6, orders=(-1, 1), digits=10)
+    with mpmath.workdps(150):
+        e = to_mp(Fraction(1, 10**8))
+        many = loopint.bubble(p, 0, 3, powers[::-1], dimension=6, orders=(-1, 9), digits=80)
+        expected = published("", p, Fraction(0), Fraction(3), *powers[::-1], 3 - e)
+        expected *= (-1) ** sum(powers) * mpmath.exp(mpmath.euler * e)
+        assert abs(at_epsilon(many, e) - expected) < mpmath.mpf(10) ** -45 * abs(expected)
+    for k in one:
+        assert one.precision_bits == two.precision_bits < 200
+        assert abs(one[k] - many[k]) <= one.bounds[k] + many.bounds[k]

@@ -72,13 +72,17 @@ class ExactComplex:
             self.re * other.re - self.im * other.im, self.re * other.im + self.im * other.re
         )
 
+    @property
+    def norm(self) -> fmpq:
+        """The square of the absolute value."""
+        return self.re * self.re + self.im * self.im
+
     def scaled(self, factor: fmpq) -> ExactComplex:
         """Return the number times a rational factor."""
         return ExactComplex(self.re * factor, self.im * factor)
 
     def __truediv__(self, other: ExactComplex) -> ExactComplex:
-        norm = other.re * other.re + other.im * other.im
-        return (self * other.conjugate()).scaled(1 / norm)
+        return (self * other.conjugate()).scaled(1 / other.norm)
 
     def conjugate(self) -> ExactComplex:
         """Return the complex conjugate."""

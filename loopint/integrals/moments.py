@@ -324,11 +324,16 @@ class FeynmanMoment:
         return _square_root(p_squared) ** int(self.s0.p)
 
     def _recurrence(self, point: TwoPoint) -> BallSeries:
-        moments = [quadratic_power_integral(point, self.tables)]
-        m1, m2 = point.m1_squared, point.m2_squared
         top = self.a + self.b
         if top == 0:
-            return moments[0]
+            return quadratic_power_integral(point, self.tables)
+        a, b = self.a, self.b
+        if point.m1_squared.norm < point.m2_squared.norm:
+            # From the end of the lighter line: the roots of Q, by powers of which errors grow, are
+            # smaller.  Near p^2 = m^2 with a massless line they are next to x = 0.
+            point, a, b = point.exchanged(), b, a
+        moments = [quadratic_power_integral(point, self.tables)]
+        m1, m2 = point.m1_squared, point.m2_squared
         inverse_p = 1 / arb(point.p_squared)
         beta = (m1 - m2 - ExactComplex(point.p_squared)).ball()
         at_one = self._boundary(m1)
@@ -343,9 +348,9 @@ class FeynmanMoment:
             if k > 1 and not m2.is_zero:
                 right = right - moments[k - 2].scaled((k - 1) * m2.ball())
             moments.append(over_linear(right, k + 1 + 2 * self.s0, -2).scaled(inverse_p))
-        total = moments[self.a]
-        for j in range(1, self.b + 1):
-            total = total + moments[self.a + j].scaled((-1) ** j * comb(self.b, j))
+        total = moments[a]
+        for j in range(1, b + 1):
+            total = total + moments[a + j].scaled((-1) ** j * comb(b, j))
         return total
 
     def _boundary(self, m_squared: ExactComplex) -> BallSeries | None:
