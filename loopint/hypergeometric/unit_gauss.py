@@ -115,7 +115,7 @@ def gauss_table(
         for row in weights[:-1]:
             orders = [total + power * c for total, c in zip(orders, row, strict=True)]
             power = power * w
-        shape = _times_factor(_expand(high, terms), weights[-1])
+        shape = _times_factor(_expand(high, terms, bits + guard + length // 8), weights[-1])
         orders = [total + power * new for total, new in zip(orders, shape, strict=True)]
         columns = [_coefficients(series, length) for series in orders]
 
@@ -189,24 +189,46 @@ def _safe_length(remainders: list[list[arb]], bits: int) -> int:
     return math.ceil(min(lengths)) + 1
 
 
-def _expand(p: GaussParameters, terms: int) -> list[arb_series]:
-    """Apply (*) of the module text; needs c0 > 1."""
-    base = _exp_minus_one_over_u()
-    w = _one_minus_exp_minus_u()
-    inner = _real_power(base, p.c0 - 2) * _exp_series(1 - p.b0)
-    outer = _real_power(base, 1 - p.c0) * _exp_series(p.b0)
+def _expand(p: GaussParameters, terms: int, bits: int) -> list[arb_series]:
+    """Apply (*) of the module text; needs c0 > 1.
+
+    With F_k = outer I_k, the factor inside times the one outside is E^-1 exp(u) = u/w, so that
+    s_k = (b1 u - c1 u/w) I_(k-1) for k > 1: two long products for each order.  Coefficients fall
+    like 6^-n: bits beyond an error of 2^-bits are dropped, which makes the products faster.
+    """
+    base = _shortened(_exp_minus_one_over_u(), bits)
+    outer = _shortened(_real_power(base, 1 - p.c0) * _exp_series(p.b0), bits)
+    u_over_w = _shortened(_u_over_w(base), bits)
+    inner = _shortened(u_over_w / outer, bits)
     b1, c1, start = arb(p.b1), arb(p.c1), arb(p.c0 - 1)
+    step = arb_series([0, b1]) - c1 * u_over_w
     orders: list[arb_series] = []
+    s = start * inner
     for k in range(terms):
-        if k == 0:
-            right = arb_series([start])
-        else:
-            right = (b1 * w - c1) * orders[k - 1]
-            if k == 1:
-                right = right + c1
-        s = _coefficients(inner * right, flint.ctx.cap)
-        orders.append(outer * arb_series([c / (n + start) for n, c in enumerate(s)]))
+        integral = _shortened(
+            arb_series([c / (n + start) for n, c in enumerate(_coefficients(s, flint.ctx.cap))]),
+            bits,
+        )
+        orders.append(outer * integral)
+        if k + 1 < terms:
+            s = step * integral
+            if k == 0:
+                s = s + c1 * inner
     return orders
+
+
+def _shortened(series: arb_series, bits: int) -> arb_series:
+    """Round every coefficient to an error of about 2^-bits, which its ball then holds."""
+    result = []
+    for c in series.coeffs():
+        mantissa, exponent = c.mid().man_exp()
+        kept = bits + int(mantissa).bit_length() + int(exponent)
+        if kept < 2:
+            result.append(arb(0, c.abs_upper()))
+            continue
+        with working_precision(kept):
+            result.append(+c)
+    return arb_series(result)
 
 
 def _bounds(p: GaussParameters, terms: int, radius: float) -> list[arb]:
@@ -248,6 +270,11 @@ def _one_minus_exp_minus_u() -> arb_series:
     coefficients = list((-(_exp_series(fmpq(-1)))).coeffs())
     coefficients[0] = arb(0)
     return arb_series(coefficients)
+
+
+def _u_over_w(base: arb_series) -> arb_series:
+    """Return u/w = u/(1 - exp(-u)) = 1/E(-u)."""
+    return 1 / arb_series([-c if n % 2 else c for n, c in enumerate(base.coeffs())])
 
 
 def _real_power(base: arb_series, exponent: fmpq) -> arb_series:
