@@ -408,10 +408,12 @@ def check_difference(drawn: Drawn, found: LaurentSeries) -> str:
         )
         ends.append(drawn.evaluate(kinematics=tuple(moved), derivatives=(), digits=90))
     with mpmath.workdps(120):
+        weight = Fraction(drawn.dimension, 2) - sum(n for n, _ in drawn.pairs) - 1
+        natural = to_mp(size) ** to_mp(weight)
         for k in found:
             slope = (ends[0][k] - ends[1][k]) / (2 * to_mp(step))
             error = abs(ends[0][k]) * mpmath.mpf(10) ** -15 / to_mp(size)
-            error += abs(slope) * mpmath.mpf(10) ** -20
+            error += abs(slope) * mpmath.mpf(10) ** -20 + natural * mpmath.mpf(10) ** -40
             if abs(slope - found[k]) > error + found.bounds[k]:
                 return f"order {k}: {mpmath.nstr(slope, 20)}"
     return ""
@@ -443,7 +445,7 @@ def lost_digits(drawn: Drawn) -> int:
         return 0
     p, m1, m2 = drawn.kinematics
     gap = abs(p - m1 - m2)
-    return math.ceil(math.log10(1 + abs(p) / gap)) if gap else 0
+    return len(str(math.ceil(abs(p) / gap))) if gap else 0
 
 
 def closed_form(drawn: Drawn, nus: list[Any], half: Any) -> Any:
@@ -660,6 +662,7 @@ class Outcome:
     seconds: float
     tried: list[str] = field(default_factory=list)
     findings: dict[str, str] = field(default_factory=dict)
+    slow: list[str] = field(default_factory=list)
 
 
 def run(seed: int, limit: float = 20.0, most_digits: int = 1000) -> Outcome:
@@ -671,6 +674,8 @@ def run(seed: int, limit: float = 20.0, most_digits: int = 1000) -> Outcome:
             found = drawn.evaluate()
     except loopint.LoopintError as refusal:
         return Outcome(seed, f"{type(refusal).__name__}: {refusal}", time.perf_counter() - started)
+    except TooSlowError:
+        return Outcome(seed, "slow", time.perf_counter() - started, slow=["evaluate"])
     except Exception as error:
         outcome = Outcome(seed, "failed", time.perf_counter() - started)
         outcome.findings["evaluate"] = f"{type(error).__name__}: {error}"
@@ -685,7 +690,8 @@ def run(seed: int, limit: float = 20.0, most_digits: int = 1000) -> Outcome:
         except (NotApplicableError, loopint.UnsupportedIntegralError, loopint.UnregulatedError):
             continue
         except TooSlowError:
-            text = "too slow" if name not in {"mpmath", "published"} else ""
+            outcome.slow.append(name)
+            continue
         except Exception as error:
             text = f"{type(error).__name__}: {error}"
         outcome.tried.append(name)
@@ -718,6 +724,7 @@ def main() -> int:
     print("status", dict(Counter(o.status.split(":")[0] for o in outcomes)))
     print("refusals", dict(Counter(o.status for o in outcomes if ":" in o.status).most_common(8)))
     print("comparisons", dict(Counter(name for o in outcomes for name in o.tried)))
+    print("over the time limit", dict(Counter(name for o in outcomes for name in o.slow)))
     print("findings", dict(Counter(name for o in outcomes for name in o.findings)))
     for outcome in sorted(outcomes, key=lambda o: -o.seconds)[:8]:
         print(f"{outcome.seconds:8.2f} s  {draw(outcome.seed, arguments.digits)}")

@@ -5,6 +5,7 @@ from __future__ import annotations
 from fractions import Fraction
 
 import mpmath
+import numpy as np
 import pytest
 
 import loopint
@@ -177,3 +178,22 @@ def test_near_on_shell_whichever_line_is_massless(powers: tuple[int, int]) -> No
     for k in one:
         assert one.precision_bits == two.precision_bits < 200
         assert abs(one[k] - many[k]) <= one.bounds[k] + many.bounds[k]
+
+
+@pytest.mark.parametrize("orders", [(-1, -1), (-3, -1), (-4, -2)])
+def test_doubles_of_the_pole_alone(orders: tuple[int, int]) -> None:
+    """Complex masses and no order above the pole, beside real masses."""
+    masses = np.array([1.0, 2.0 - 1j, -15.4 - 1e-15j])
+    result = loopint.bubble_array([5.0, -5.0, 12.0], masses, 2.0, orders=orders)
+    for k in range(orders[0], orders[1] + 1):
+        assert (result[k] == (1 if k == -1 else 0)).all()
+        assert (result.bounds[k] == 0).all()
+
+
+def test_a_propagator_that_vanishes_identically_ends_soon() -> None:
+    """Equal masses and powers at threshold hold 1/Gamma((d+1)/2 - nu) (Euler's beta integral)."""
+    powers = ((2, -1), (2, -1))
+    series = loopint.propagator(
+        4, 1, 1, powers, dimension=1, orders=(0, 0), digits=5, max_precision_bits=300
+    )
+    assert abs(series[0]) <= series.bounds[0] < 1e-60

@@ -263,6 +263,11 @@ def _fill(
     """
     p, m1, m2 = kinematics
     log_mu = scale[0]
+    if plan.master is Master.J:
+        pole = plan.sign * plan.prefactor[0]
+        arrays.fill(-1, pole, 0.0 if abs(pole) == 1.0 else abs(pole))
+        if len(plan.prefactor) == 1:
+            return
     if np.iscomplexobj(m1) or np.iscomplexobj(m2):
         real = (m1.imag == 0) & (m2.imag == 0)
         index = np.flatnonzero(~real)
@@ -272,18 +277,13 @@ def _fill(
         kinematics = (p, np.real(m1), np.real(m2))
     else:
         index = np.arange(p.size)
-    if plan.master is Master.J:
-        pole = plan.sign * plan.prefactor[0]
-        arrays.fill(-1, pole, 0.0 if abs(pole) == 1.0 else abs(pole))
-        if len(plan.prefactor) == 1:
-            return
-        if len(plan.prefactor) == 2:
-            _fill_with_logarithms(arrays, plan, index, kinematics, log_mu, tolerance)
+    if plan.master is Master.J and len(plan.prefactor) == 2:
+        _fill_with_logarithms(arrays, plan, index, kinematics, log_mu, tolerance)
+        index = index[arrays.missing[index]]
+        if EXTENDED:
+            _fill_in_extended_precision(arrays, plan, index, kinematics, scale, tolerance)
             index = index[arrays.missing[index]]
-            if EXTENDED:
-                _fill_in_extended_precision(arrays, plan, index, kinematics, scale, tolerance)
-                index = index[arrays.missing[index]]
-            arrays.values[0][index] = 0.0
+        arrays.values[0][index] = 0.0
     index = _fill_by_ends(arrays, plan, index, kinematics, log_mu, tolerance)
     _fill_general(arrays, plan, index, kinematics, log_mu, tolerance)
 

@@ -285,6 +285,7 @@ def _quadrature(
         (lowest, highest),
         Conventions(measure, PropagatorSign.EUCLIDEAN),
         digits=digits,
+        attempts=2,  # the caller raises the precision
     )
     balls = [result.balls[k] for k in range(lowest, highest + 1)]
     if not all(ball.is_finite() for ball in balls):

@@ -99,6 +99,7 @@ def integrate_feynman(
     *,
     digits: int = 12,
     arithmetic: ArithmeticName = "balls",
+    attempts: int = ATTEMPTS,
 ) -> QuadratureResult:
     """Integrate the Feynman-parameter representation of a one- or two-point integral.
 
@@ -120,6 +121,8 @@ def integrate_feynman(
         what was reached is in the result.
     arithmetic
         "balls": proven enclosures.  "mpmath": mpmath's arithmetic and tanh-sinh rule, estimates.
+    attempts
+        How many precisions to try with balls.
 
     Notes
     -----
@@ -153,7 +156,9 @@ def integrate_feynman(
     if task.is_zero:
         return _exact_zeros(orders, arithmetic, digits)
     task.check_existence()
-    return _with_balls(task, digits) if arithmetic == "balls" else _with_mpmath(task, digits)
+    if arithmetic == "balls":
+        return _with_balls(task, digits, attempts)
+    return _with_mpmath(task, digits)
 
 
 def _parse(point: OnePoint | TwoPoint, powers: tuple[Power, ...]) -> tuple[EpsilonLinear, ...]:
@@ -185,12 +190,12 @@ def _exact_zeros(
     )
 
 
-def _with_balls(task: Representation, digits: int) -> QuadratureResult:
+def _with_balls(task: Representation, digits: int, attempts: int) -> QuadratureResult:
     needed = bits_for_digits(digits)
     bits = round_up_to_word(needed + GUARD_BITS)
     found: dict[int, Ball] = {}
     reached = -1
-    for _ in range(ATTEMPTS):
+    for _ in range(attempts):
         with working_precision(bits):
             try:
                 prefactor, moments = _ball_factors(task)
