@@ -69,6 +69,11 @@ CASES = [
     {"a": "0.001", "b": "1", "range": "[-2, 3]"},
     {"mu": "100", "range": "[-5, 40]"},
     {"measure": "plain"},
+    {"b": "0", "range": "[-20, 30]"},
+    {"a": "0", "range": "[3.9, 4.1]", "measure": "plain"},
+    {"b": "0", "range": "[1.5, 1.6]", "mu": "50"},
+    {"b": "0", "range": "[-1e6, 1]"},
+    {"a": "0.001", "b": "0", "range": "[-3, 7]"},
     {"measure": "two_pi", "mu": "1/7"},
 ]
 
@@ -83,7 +88,10 @@ def test_the_error_is_below_its_bound_everywhere(tmp_path, case):
         [
             np.random.default_rng(4).uniform(low, high, 60),
             made.edges,
-            threshold + np.array([0, 1e-15, -1e-15, 1e-12, -1e-12, 1e-6, -1e-6, 0.01, -0.01]),
+            threshold
+            + np.array(
+                [0, 1e-15, -1e-15, 1e-19, -1e-19, 1e-18, 1e-12, -1e-12, 1e-6, -1e-6, 0.01, -0.01]
+            ),
         ]
     )
     points = points[(points >= low) & (points <= high)]
@@ -108,7 +116,9 @@ def test_the_bound_on_both_sheets_holds_on_the_first():
     sheets = Sheets(9.0, 2 * np.sqrt(2.0))
     for s in (-50.0, -1.0, 0.1, 5.0, 8.99, 9.01, 40.0):
         value = abs(complex(loopint.bubble(s, 1, 4, orders=(0, 0))[0]))
-        assert value < coefficient_bound(sheets, np.sqrt(abs(9 - s)) + 0.1, Conventions())
+        assert value < coefficient_bound(
+            sheets.bound(True, 0.0, np.sqrt(abs(9 - s)) + 0.1), Conventions()
+        )
 
 
 def test_saved_and_loaded_again(tmp_path):
@@ -176,7 +186,8 @@ def test_damaged_files_are_refused(tmp_path):
 UNUSABLE = [
     ({"range": "[3, 1]"}, "two increasing numbers"),
     ({"range": '[0, "1e400"]'}, "range holds a number beyond the range of float64"),
-    ({"a": "0"}, "positive masses"),
+    ({"a": "0", "b": "0"}, "both masses are zero"),
+    ({"a": "-1"}, "accepted: positive masses"),
     ({"more": "error = 1e-18"}, "is not reached"),
     ({"more": "ordres = [0]"}, "did you mean orders?"),
 ]

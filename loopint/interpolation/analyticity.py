@@ -18,6 +18,17 @@ bounded by |x| <= 1 + (|m1^2-m2^2| + t)/(2|s|) <= 5, and Int_0^1 |log|x-a|| dx i
 
 On the strip -0.9 v0 < Re v < 0 of the second sheet |s| = |sqrt(t)-v| |sqrt(t)+v| >= t/10.
 
+With one massless line t = m^2 and
+
+    J = -2 + log m^2 + (1 - t/s) L,   L = 2 log(w/m) below threshold, 2 log(u/m) - i pi above,
+
+w = sqrt(t-s), u = sqrt(s-t).  The logarithm at threshold stays in every variable, but J is analytic
+where Re w > 0 (s = 0 is regular there, |(1-t/s) L| <= 2.1 for |s| <= t/2) and where Re u > 0 (the
+upper half of that plane is the first sheet of s, the lower half the second, with its pole s = 0 at
+u = -i m), so that pieces shrink towards the threshold.  On the last one J differs from its value at
+threshold by at most (w^2/|s|) (2 |log(w/m)| + pi).  In an ellipse with Re u >= l/10
+|s| = |u-im| |u+im| >= l^2/100, and |s| >= t - |u|^2.
+
 A function bounded by M inside the ellipse with foci -1, 1 and half-axes (rho +- 1/rho)/2 differs
 from its interpolant in n+1 Chebyshev points by at most 4 M rho^(-n)/(rho-1)
 (Trefethen, Approximation Theory and Approximation Practice (2013), theorem 8.2).
@@ -27,6 +38,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Protocol
 
 from loopint.core.conventions import Conventions
 from loopint.core.gamma_factors import EpsilonFactor
@@ -36,6 +48,28 @@ STRIP = 0.9
 HIGHEST_ORDER = 0
 GROWTH = 1.001  # more than every rounding in these few operations together
 LARGEST_RHO = 60.0
+NEAREST = 0.1  # Re w in an ellipse, relative to the start of its piece
+INNERMOST = 1e-9  # the last piece in w/m: J changes by less than 1e-16 there
+
+
+class Geometry(Protocol):
+    """Where a bubble is analytic, and how large it is there; lengths in units of mu."""
+
+    def length(self, below: bool, at: float) -> float:
+        """Return the length of a good piece from w = at on."""
+        ...
+
+    def largest_ellipse(self, below: bool, left: float, right: float) -> float:
+        """Return rho of an ellipse around [left, right] that stays where J is analytic."""
+        ...
+
+    def bound(self, below: bool, left: float, radius: float) -> float:
+        """Return a bound on |J| in the ellipse of a piece that starts at left; |w| <= radius."""
+        ...
+
+    def jump(self, stop: float) -> float | None:
+        """Return a bound on the change of J from w = 0 to stop, or None if 0 is a regular point."""
+        ...
 
 
 @dataclass(frozen=True)
@@ -66,13 +100,55 @@ class Sheets:
         reach = STRIP * self.v0 / half  # of the smaller half-axis
         return min(reach + math.sqrt(reach * reach + 1), LARGEST_RHO)
 
-    def bound(self, radius: float) -> float:
+    def length(self, below: bool, at: float) -> float:
+        """Return the length of a good piece: the ellipse grows with the distance."""
+        return 0.8 * ((at + STRIP * self.v0) if below else self.v0)
+
+    def jump(self, stop: float) -> None:  # noqa: ARG002 - of every geometry
+        """Return None: v = 0 is a regular point."""
+        return
+
+    def bound(self, below: bool, left: float, radius: float) -> float:  # noqa: ARG002
         """Return a bound on |J| on both sheets for |v| <= radius."""
         t = self.threshold
         a = max(abs(math.log(t / 4)), abs(math.log(t + radius * radius))) + 0.3
         first = a + 2 * (2 + math.log(6)) + math.pi
         second = 2 * math.pi * radius * math.sqrt(self.v0**2 + radius * radius) / (0.1 * t)
         return GROWTH * (first + second)
+
+
+@dataclass(frozen=True)
+class OneMass:
+    """The geometry of a bubble with one massless line; m is the other mass, in units of mu."""
+
+    m: float
+
+    def length(self, below: bool, at: float) -> float:  # noqa: ARG002 - of every geometry
+        """Return twice the distance from threshold, and a small length at threshold."""
+        return 2 * at if at else INNERMOST * self.m
+
+    def largest_ellipse(self, below: bool, left: float, right: float) -> float:  # noqa: ARG002
+        """Return rho of an ellipse around [left, right] with Re w >= left/10."""
+        half, middle = (right - left) / 2, (right + left) / 2
+        reach = (middle - left * NEAREST) / half
+        return min(reach + math.sqrt(reach * reach - 1), LARGEST_RHO) if left else 2.0
+
+    def bound(self, below: bool, left: float, radius: float) -> float:
+        """Return a bound on |J| where Re w >= left/10 and |w| <= radius."""
+        t = self.m**2
+        ends = (left * NEAREST / self.m, radius / self.m)
+        logarithm = 2 * max(abs(math.log(end)) for end in ends) + 2 * math.pi
+        if below:
+            largest = max(3 * logarithm, 2.1)
+        else:
+            smallest = max((left * NEAREST) ** 2, t - radius**2)
+            largest = (1 + t / smallest) * logarithm
+        return GROWTH * (2 + abs(math.log(t)) + largest)
+
+    def jump(self, stop: float) -> float:
+        """Return a bound on |J(w) - J(0)| for w <= stop, much smaller than m."""
+        share = (stop / self.m) ** 2
+        return GROWTH * share / (1 - share) * (2 * abs(math.log(stop / self.m)) + math.pi)
 
 
 def prefactor_sizes(conventions: Conventions) -> tuple[float, float]:
@@ -83,10 +159,10 @@ def prefactor_sizes(conventions: Conventions) -> tuple[float, float]:
         return float(abs(series[-1]).upper()), float(abs(series[0]).upper())
 
 
-def coefficient_bound(sheets: Sheets, radius: float, conventions: Conventions) -> float:
-    """Bound the finite part of B on both sheets for |v| <= radius, in units where mu = 1."""
+def coefficient_bound(modulus: float, conventions: Conventions) -> float:
+    """Bound the finite part of B where |J| <= modulus, in units where mu = 1."""
     pole, constant = prefactor_sizes(conventions)
-    return GROWTH * (constant + pole * sheets.bound(radius))
+    return GROWTH * (constant + pole * modulus)
 
 
 def truncation(bound: float, rho: float, degree: int) -> float:

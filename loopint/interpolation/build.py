@@ -19,9 +19,13 @@ from loopint.core.numbers import ExactComplex, float_with_bound
 from loopint.core.precision import working_precision
 from loopint.integrals.registry import Evaluator, Integral
 from loopint.interpolation.analyticity import (
+    GROWTH,
     HIGHEST_ORDER,
+    Geometry,
+    OneMass,
     Sheets,
     coefficient_bound,
+    prefactor_sizes,
     truncation,
 )
 from loopint.interpolation.chebyshev import (
@@ -132,6 +136,8 @@ def _kinematics(
         config.conventions.measure, config.conventions.propagator_sign, mu_squared
     )
     fixed = [square for square in squares if square is not None]
+    if not any(fixed):
+        raise InputError("both masses are zero; accepted: at most one massless line")
     if entry.mass is None or entry.mass_range is None:
         return _Job(entry, conventions, *ends, fixed[0], fixed[1], where)
     if len(fixed) != 1:
@@ -174,7 +180,7 @@ def _squared_mass(
     if not squared and varying is not None and expressions[key].text == varying:
         return None
     mass = _constant(expressions[key], known, key)
-    if mass <= 0:
+    if mass < 0 or (mass == 0 and varying is not None):
         raise InputError(f"{key} = {mass}; accepted: positive masses")
     return mass if squared else mass * mass
 
@@ -217,8 +223,11 @@ class _Job:
             product = arb(self.m1).sqrt() * arb(self.m2).sqrt()
             threshold = arb(self.m1) + arb(self.m2) + 2 * product
             # everything in the bound is in units of mu^2
-            sheets = Sheets(
-                float((threshold / arb(mu)).mid()), float((2 * (product / arb(mu)).sqrt()).mid())
+            size = float((threshold / arb(mu)).mid())
+            sheets: Geometry = (
+                Sheets(size, float((2 * (product / arb(mu)).sqrt()).mid()))
+                if product > 0
+                else OneMass(math.sqrt(size))
             )
             unit = float(arb(mu).sqrt().mid())
             pieces = self._pieces(threshold, sheets, unit)
@@ -239,9 +248,7 @@ class _Job:
             for k in self.entry.orders:
                 values, node_error = found[k]
                 coefficients[k][number, : n + 1] = values
-                radius = piece.radius(sheets, unit)
-                bound = coefficient_bound(sheets, radius, self.conventions)
-                total = truncation(bound, piece.rho(sheets, unit), n) if k >= 0 else 0.0
+                total = self._truncation(piece, n, sheets, unit) if k >= 0 else 0.0
                 total += node_error + _evaluation_error(values, piece)
                 errors[k] = max(errors[k], total)
         for k, error in errors.items():
@@ -279,7 +286,7 @@ class _Job:
             self.conventions.described,
         )
 
-    def _pieces(self, threshold: arb, sheets: Sheets, unit: float) -> list[Piece]:
+    def _pieces(self, threshold: arb, sheets: Geometry, unit: float) -> list[Piece]:
         """Cut the range so that an acceptable degree reaches the error on every piece."""
         t = float(threshold.mid())
         low, high = self.ends
@@ -297,12 +304,19 @@ class _Job:
             )
         return pieces
 
-    def _degree(self, piece: Piece, sheets: Sheets, unit: float, tolerance: float) -> int:
+    def _truncation(self, piece: Piece, n: int, sheets: Geometry, unit: float) -> float:
+        """Bound |coefficient - interpolant of degree n| on a piece."""
+        jump = sheets.jump(piece.stop / unit) if piece.start == 0 else None
+        if jump is not None:  # between two values that both are so close to that at threshold
+            pole, _ = prefactor_sizes(self.conventions)
+            return 2 * GROWTH * pole * jump if n == 1 else math.inf
+        modulus = sheets.bound(piece.below, piece.start / unit, piece.radius(sheets, unit))
+        return truncation(coefficient_bound(modulus, self.conventions), piece.rho(sheets, unit), n)
+
+    def _degree(self, piece: Piece, sheets: Geometry, unit: float, tolerance: float) -> int:
         """Return the smallest degree whose truncation error is proven to be small enough."""
-        rho, radius = piece.rho(sheets, unit), piece.radius(sheets, unit)
-        bound = coefficient_bound(sheets, radius, self.conventions)
         n = 1
-        while truncation(bound, rho, n) > tolerance:
+        while self._truncation(piece, n, sheets, unit) > tolerance:
             n += 1
             if n > MOST_DEGREE:
                 raise ConfigError(
@@ -358,26 +372,25 @@ class Piece:
         """Half the length in w."""
         return (self.stop - self.start) / 2
 
-    def rho(self, sheets: Sheets, unit: float) -> float:
+    def rho(self, sheets: Geometry, unit: float) -> float:
         """Return the parameter of the ellipse that is used."""
         largest = sheets.largest_ellipse(self.below, self.start / unit, self.stop / unit)
         return 0.999 * largest
 
-    def radius(self, sheets: Sheets, unit: float) -> float:
+    def radius(self, sheets: Geometry, unit: float) -> float:
         """Return a bound on |w| in the ellipse, in units of mu."""
         rho = self.rho(sheets, unit)
         return 1.001 * (self.centre + self.half * (rho + 1 / rho) / 2) / unit
 
 
 def _cut(
-    below: bool, start: float, stop: float, t: float, sheets: Sheets, unit: float
+    below: bool, start: float, stop: float, t: float, sheets: Geometry, unit: float
 ) -> list[Piece]:
     """Cut [start, stop] in w into pieces with a roomy ellipse."""
     pieces = []
     at = start
     while at < stop:
-        room = at + 0.9 * sheets.v0 * unit if below else sheets.v0 * unit
-        length = 0.8 * room  # the ellipse grows with the distance from the singularities
+        length = sheets.length(below, at / unit) * unit
         end = stop if at + 1.3 * length >= stop else at + length
         near, far = (t - end * end, t - at * at) if below else (t + at * at, t + end * end)
         pieces.append(Piece(below, at, end, near, far))
