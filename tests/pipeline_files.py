@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import random
+import signal
 from typing import TYPE_CHECKING, Any
 
 import pyarrow as pa
@@ -111,3 +112,8 @@ def file_contents(directory: Path) -> dict[str, bytes]:
     if (directory / "table.csv").exists():
         files.append(directory / "table.csv")
     return {path.name: path.read_bytes() for path in files}
+
+
+def hear_interrupts() -> None:
+    """Undo what a shell does to a command in the background: it ignores Ctrl-C, and so do we."""
+    signal.signal(signal.SIGINT, signal.default_int_handler)

@@ -23,7 +23,7 @@ from loopint.pipeline.errors import ConfigError
 from loopint.pipeline.run import run_config
 from loopint.pipeline.run_directory import RunDirectory
 from loopint.pipeline.verify import verify_run
-from tests.pipeline_files import file_contents, points_table, write_run
+from tests.pipeline_files import file_contents, hear_interrupts, points_table, write_run
 
 ROWS, CHUNK = 240, 4
 
@@ -34,6 +34,7 @@ def write(directory: Path, **options) -> Path:
 
 def start(config: Path, *options: str, **process) -> subprocess.Popen:
     command = [sys.executable, "-m", "loopint.cli", "run", str(config), *options]
+    process.setdefault("preexec_fn", hear_interrupts)
     return subprocess.Popen(
         command, stdout=subprocess.DEVNULL, stderr=subprocess.PIPE, text=True, **process
     )

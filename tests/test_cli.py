@@ -20,7 +20,7 @@ import pytest
 
 from loopint.cli import main
 from loopint.pipeline import cross_check
-from tests.pipeline_files import points_table, write_run
+from tests.pipeline_files import hear_interrupts, points_table, write_run
 
 Command = Callable[..., tuple[int, str, str]]
 
@@ -269,6 +269,7 @@ def test_interrupted_run_says_how_to_continue(tmp_path):
         stderr=subprocess.PIPE,
         text=True,
         start_new_session=True,
+        preexec_fn=hear_interrupts,  # noqa: PLW1509
     )
     deadline = time.monotonic() + 60
     while not list((tmp_path / "out" / ".work").glob("chunk-*.json")):

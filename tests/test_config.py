@@ -350,7 +350,7 @@ MISTAKES = [
     ('"(m_alder + 1/3)**2"', '["p2", 1]', 'p_squared: ["p2", 1] is complex; accepted: a real'),
     ('"(m_alder + 1/3)**2"', '"p2 +"', "p_squared: 'p2 +' is not arithmetic on columns; accepted"),
     ('"(m_alder + 1/3)**2"', '"sqrt(p2)"', "p_squared: 'sqrt(p2)' is not allowed; accepted: numb"),
-    ('"(m_alder + 1/3)**2"', '"9**9**9"', "p_squared: '9**9**9' has the exponent 9**9; accepted"),
+    ('"(m_alder + 1/3)**2"', '"9**9**9"', "p_squared: '9**9**9' has the exponent '9**9'; accepted"),
     ('"(m_alder + 1/3)**2"', "inf", "p_squared = Infinity; accepted: a number, a column, or arith"),
     ('"(m_alder + 1/3)**2"', "true", "p_squared = true; accepted: a number, a column, or arithme"),
     ('"(m_alder + 1/3)**2"', "1979-05-27", "p_squared = 1979-05-27; accepted: a number, a column"),

@@ -24,7 +24,7 @@ from loopint.pipeline.errors import ConfigError
 from loopint.pipeline.points import open_points
 from loopint.pipeline.run import run_config
 from loopint.pipeline.run_directory import RunDirectory, file_sha256
-from tests.pipeline_files import file_contents, points_table, write_run
+from tests.pipeline_files import file_contents, hear_interrupts, points_table, write_run
 
 ROWS, CHUNK = 240, 4
 FORMATS = '["parquet", "csv"]'
@@ -271,6 +271,7 @@ class Finalized:
 @pytest.mark.filterwarnings("ignore::pytest.PytestUnraisableExceptionWarning")
 def test_an_interrupt_that_python_drops_is_noticed(expected, tmp_path):
     config = load_config(write(tmp_path))
+    hear_interrupts()
 
     def progress(done: int, _: int) -> None:
         if done == 3 * CHUNK:
