@@ -17,9 +17,13 @@ and Re(m+M) >= r + M >= 2 sqrt(r M): every singular v has Re v <= -V, V = 2 sqrt
 of one variable (`loopint.interpolation.analyticity`) has the same form with V in the place of v0.
 
 J is bounded on a product of two ellipses by its values on the product of their boundaries, which
-are covered with complex balls.  Close to s = 0, where the closed form cancels, Re m^2 > 0 and
+are covered with complex balls.  Close to s = 0 the closed form cancels.  There, with Re m^2 > 0,
+Q = Q_0 - x(1-x) s and Q_0 = x m^2 + (1-x) M^2,
 
-    |s| <= 2 q, q = min(Re m^2, M^2):   Re Q >= q/2,   |log Q| <= max |log of an end of |Q|| + pi/2.
+    |Q_0| >= Re Q_0 >= x(1-x) T,   T = (sqrt(Re m^2) + M)^2,
+
+so that |s| <= T/2 gives |1 - Q/Q_0| <= 1/2 and |log Q| <= |log Q_0| + 1.3, where Q_0 lies in the
+right half-plane between min(Re m^2, M^2) and max(|m|^2, M^2) in modulus.
 
 With I_1, I_2 the interpolation in n_1+1, n_2+1 Chebyshev points and f bounded by B in the product,
 
@@ -130,13 +134,16 @@ def _g(z: acb) -> acb:
 
 
 def _near_zero(s: acb, m_squared: acb, other_squared: arb) -> arb | None:
-    """Bound |J| where |s| <= 2 q; None elsewhere."""
-    q = m_squared.real.min(other_squared).lower()
-    if not q > 0 or not s.abs_upper() <= 2 * q:
+    """Bound |J| where |s| <= T/2; None elsewhere."""
+    real = m_squared.real.lower()
+    if not real > 0:
         return None
-    upper = m_squared.abs_upper().max(other_squared) + q / 2
-    sizes = abs((q / 2).log()).max(abs(upper.log()))
-    return (sizes + arb.pi() / 2).upper()
+    total = real.sqrt() + other_squared.sqrt()
+    if not s.abs_upper() <= (total * total / 2).lower():
+        return None
+    lower, upper = real.min(other_squared), m_squared.abs_upper().max(other_squared)
+    sizes = abs(lower.log()).max(abs(upper.log()))
+    return (sizes + arb.pi() / 2 + arb("1.3")).upper()
 
 
 @cache
