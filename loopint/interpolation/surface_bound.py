@@ -127,10 +127,13 @@ def _g(z: acb) -> acb:
     if rest < arb(1) / 8:
         size = arb(0, (arb.pi() * rest * ((1 + z).abs_upper() / 2).sqrt()).upper())
         return acb(size, size)
+    if z.imag.mid() < 0:
+        return _g(z.conjugate()).conjugate()
     if z.real.mid() > 1:  # both functions of the definition have their cuts here
         root = (z - 1).sqrt() * (z + 1).sqrt()
         return -root * (z + root).log()
-    return (1 - z * z).sqrt() * z.acos()
+    root = (1 - z * z).sqrt()
+    return -I_UNIT * root * (z + I_UNIT * root).log()  # no cancellation for Im z >= 0
 
 
 def _near_zero(s: acb, m_squared: acb, other_squared: arb) -> arb | None:
