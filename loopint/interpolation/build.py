@@ -37,6 +37,7 @@ from loopint.interpolation.chebyshev import (
     lebesgue_constant,
     nearby_rational,
     node,
+    shortened,
 )
 from loopint.interpolation.export import write_exports
 from loopint.interpolation.files import save_interpolant
@@ -49,6 +50,7 @@ from loopint.pipeline.rounded import finite_double
 if TYPE_CHECKING:
     from collections.abc import Mapping
 
+    from loopint.interpolation.interpolant import Complex
     from loopint.pipeline.config import IntegralConfig, InterpolationRunConfig, MassKeys
     from loopint.pipeline.expressions import Expression
     from loopint.pipeline.interpolation_config import InterpolationConfig
@@ -238,16 +240,13 @@ class _Job:
         )
         tolerance = float(self.entry.error)
         chosen = [self._degree(piece, sheets, unit, tolerance / 4) for piece in pieces]
-        degree = max(chosen)
-        coefficients = {
-            k: np.zeros((len(pieces), degree + 1), dtype=np.complex128) for k in self.entry.orders
-        }
+        made: dict[int, list[Complex]] = {k: [] for k in self.entry.orders}
         errors = dict.fromkeys(self.entry.orders, 0.0)
-        for number, (piece, n) in enumerate(zip(pieces, chosen, strict=True)):
+        for piece, n in zip(pieces, chosen, strict=True):
             found = self._interpolate(piece, n, evaluator, threshold)
             for k in self.entry.orders:
                 values, node_error = found[k]
-                coefficients[k][number, : n + 1] = values
+                made[k].append(values)
                 total = self._truncation(piece, n, sheets, unit) if k >= 0 else 0.0
                 total += node_error + _evaluation_error(values, piece)
                 errors[k] = max(errors[k], total)
@@ -257,7 +256,12 @@ class _Job:
                     f"{self.where} error = {self.entry.error} is not reached at order {k} (proven: "
                     f"{error:.1e}); accepted: a larger error"
                 )
-        return self._finished(pieces, threshold, coefficients, errors), degree
+        length = max(len(values) for one in made.values() for values in one)
+        coefficients = {
+            k: np.array([np.pad(values, (0, length - len(values))) for values in one])
+            for k, one in made.items()
+        }
+        return self._finished(pieces, threshold, coefficients, errors), length - 1
 
     def _finished(
         self,
@@ -348,7 +352,8 @@ class _Job:
                 array = np.array([complex(a[0], b[0]) for a, b in rounded])
                 rounding = sum(a[1] + b[1] for a, b in rounded)
                 nodes_error = lebesgue_constant(n) * (largest + SHIFT_ERROR)
-                found[k] = (array, 1.001 * (nodes_error + rounding))
+                kept, dropped = shortened(array[:, np.newaxis], float(self.entry.error) / 8)
+                found[k] = kept[:, 0], 1.001 * (nodes_error + rounding) + dropped
         return found
 
 

@@ -34,6 +34,7 @@ from loopint.interpolation.chebyshev import (
     lebesgue_constant,
     nearby_rational,
     node,
+    shortened,
 )
 from loopint.interpolation.surface import Strip, SurfaceInterpolant, middle_and_half
 from loopint.interpolation.surface_bound import Ellipse, largest_modulus
@@ -188,7 +189,7 @@ class SurfaceJob:
                 re, re_error = _transformed([[ball.real.mid() for ball in row] for row in balls])
                 im, im_error = _transformed([[ball.imag.mid() for ball in row] for row in balls])
                 error = norm * (radius + SHIFT_ERROR) + re_error + im_error
-                values, dropped = _shortened(re + 1j * im, self.error / 8)
+                values, dropped = shortened(re + 1j * im, self.error / 8)
                 found[order] = values, GROWTH * (error + dropped)
         return found
 
@@ -279,22 +280,6 @@ def _transformed(values: list[list[arb]]) -> tuple[Real, float]:
     rounded = [float_with_bound(c) for c in both.entries()]
     numbers = np.array([value for value, _ in rounded]).reshape(both.nrows(), both.ncols())
     return numbers, sum(bound for _, bound in rounded)
-
-
-def _shortened(c: Complex, error: float) -> tuple[Complex, float]:
-    """Drop the last rows and columns as far as their sum allows; return what they add to the error.
-
-    The proven degrees are those for any function with the same bound; this one needs fewer.
-    """
-    sizes = np.abs(c.real) + np.abs(c.imag)
-    keep = []
-    for axis in (0, 1):
-        tail = np.cumsum(sizes.sum(axis=1 - axis)[::-1])[::-1]  # from each place to the end
-        keep.append(max(int((tail > error / 2).sum()), 2))
-    kept = c[: keep[0], : keep[1]]
-    return kept, 1.001 * float(
-        sizes.sum() - sizes[: keep[0], : keep[1]].sum() + 1e-16 * sizes.sum()
-    )
 
 
 def _rho(reach: float) -> float:
